@@ -155,8 +155,8 @@ class Frame:
         referred: Referred = "display",
         **facts: Any,
     ) -> Frame:
-        """Return a frame made from an (H, W, 3) array (see ``grader.files.arrays.frame_from_array``)."""
-        from grader.files.arrays import frame_from_array  # noqa: PLC0415 - the model stays a leaf
+        """Return a frame made from an (H, W, 3) array (see ``grader.colour.frames.frame_from_array``)."""
+        from grader.colour.frames import frame_from_array  # noqa: PLC0415 - the model stays a leaf
 
         return frame_from_array(pixels, space=space, linear=linear, referred=referred, **facts)
 
