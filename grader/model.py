@@ -36,9 +36,29 @@ FLAGS: Final[dict[str, str]] = {
     "matrix-missing": "the camera's colour matrix is unknown; colours are approximate",
     "nothing-measured": "no light could be measured in this frame; it was not corrected",
     "other-body": "the preset was measured on another camera body",
+    "other-kind": "the preset was measured on another kind of file (raw against developed)",
     "page-chosen": "the file holds several pictures; the full-size one was taken",
 }
 """Flag codes as they stand in the log, with the words that a reader sees."""
+
+EYE_FLAGS: Final = frozenset(
+    {
+        "few-usable-pixels",
+        "readings-disagree",
+        "coloured-light",
+        "one-coloured",
+        "dark",
+        "two-lights",
+        "high-doubt",
+        "odd-frame",
+        "profile-broken",
+        "balance-unusable",
+        "matrix-missing",
+        "nothing-measured",
+        "other-body",
+    }
+)
+"""Flags that ask a person to look at the frame."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -296,6 +316,14 @@ class Fixed:
     output: Output = field(default_factory=Output)
     measured_on_body: str = ""
     measured_doubt_deg: float | None = None
+    measured_by: Literal["", "patch", "grey-card", "target", "frame", "frames"] = ""
+    """What was measured: a patch by its place, a grey card that was found, a target's grey row, or whole frames."""
+    measured_on_file: str = ""
+    measured_on_sha256: str = ""
+    measured_patch_px: tuple[int, int, int, int] | None = None
+    """x, y, width, height in the stored orientation."""
+    measured_referred: Referred | None = None
+    """Light of a scene-referred frame is absolute, of a display-referred one relative to the file's white."""
 
 
 @dataclass(frozen=True, slots=True)
