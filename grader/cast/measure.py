@@ -1,0 +1,94 @@
+"""Measure the light of one frame."""
+
+from __future__ import annotations
+
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from grader.cast.cells import Cells, cells_from_proxy
+from grader.cast.doubt import doubt_deg
+from grader.cast.plane import GRID
+from grader.cast.proxy import build_proxy
+from grader.cast.readings import read_lights
+from grader.cast.vote import Vote, cast_vote, light_from_weights
+from grader.colour.difference import grey_delta_e_2000
+from grader.colour.opponent import cast_from_xy
+from grader.colour.white import cct_duv_from_xy, mired_from_k, xy_from_linear
+from grader.model import XY, Cast, Evidence, Frame, Proxy, Reading, Recipe
+
+Array = NDArray[np.float64]
+
+_FEWEST_CELLS: Final = 16
+"""Fewer cells than this are no picture of a scene. (judgement)"""
+
+
+def measure(frame: Frame, recipe: Recipe | None = None) -> Cast:
+    """Return the light of one frame, and how sure it is.
+
+    Parameters
+    ----------
+    frame : Frame
+    recipe : Recipe, optional
+        Only the opponent space matters here.
+
+    Returns
+    -------
+    Cast
+        All numbers None, flagged ``nothing-measured``, where the frame has nothing to measure.
+
+    Raises
+    ------
+    TooFewUsablePixels
+        The frame has no pixel at all.
+    """
+    return measure_proxy(build_proxy(frame), recipe)
+
+
+def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
+    """Return the light of one frame from its proxy (see `measure`)."""
+    recipe = recipe or Recipe()
+    cells = cells_from_proxy(proxy)
+    flags = proxy.header.flags
+    if np.count_nonzero(cells.ok) < _FEWEST_CELLS:
+        return Cast(proxy.header, recipe.opponent, flags=(*flags, "nothing-measured"))
+    vote = cast_vote(cells, proxy.header.referred)
+    light = light_from_weights(vote.weights)
+    cct_k, duv = cct_duv_from_xy(light)
+    yellow_blue, green_magenta = cast_from_xy(light, recipe.opponent)
+    return Cast(
+        header=proxy.header,
+        opponent=recipe.opponent,
+        yellow_blue=float(yellow_blue),
+        green_magenta=float(green_magenta),
+        white_xy=light,
+        cct_k=cct_k,
+        duv=duv,
+        mired=None if cct_k is None else float(mired_from_k(cct_k)),
+        delta_e_2000=grey_delta_e_2000(light),
+        doubt_deg=doubt_deg(vote),
+        readings=_readings(cells, recipe),
+        flags=flags,
+        evidence=_evidence(vote, cells),
+    )
+
+
+def _readings(cells: Cells, recipe: Recipe) -> dict[str, Reading]:
+    found = {}
+    for name, light in read_lights(cells).items():
+        if light.min() > 0:
+            found[name] = Reading(*_cast_of(light, recipe))
+    return found
+
+
+def _cast_of(light: Array, recipe: Recipe) -> tuple[float, float]:
+    x, y = xy_from_linear(light)
+    xy: XY = (float(x), float(y))
+    yellow_blue, green_magenta = cast_from_xy(xy, recipe.opponent)
+    return float(yellow_blue), float(green_magenta)
+
+
+def _evidence(vote: Vote, cells: Cells) -> Evidence:
+    below_peak = (vote.log_likelihood.max() - vote.log_likelihood) * 16.0
+    return Evidence(GRID, np.minimum(np.rint(below_peak), 255).astype(np.uint8), int(cells.ok.sum()))
