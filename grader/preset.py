@@ -308,7 +308,7 @@ def _refuse_constant(text: str) -> float:
 def _read_named(name: str) -> Preset:
     from grader import preset_document  # noqa: PLC0415 - pydantic costs start-up time
 
-    if not re.fullmatch(r"[^\W_](?:[\w .-]*\w)?", name) or len(name) > 64 or ".." in name:
+    if not re.fullmatch(preset_document.NAME, name):
         raise PresetError(
             f"{name!r} is not a preset's name", hint="give a name from 'grader presets', or a .json file"
         )

@@ -32,7 +32,10 @@ SCHEMA_FILE: Final = "preset.schema.json"
 CCT_RANGE_K: Final = (1667.0, 25_000.0)
 """Colour temperatures that can be aimed at; those of `grader.cast.correction.aim_xy`."""
 
-_NAME = r"^[^\W_](?:[\w .-]{0,62}\w)?$"
+NAME: Final = (
+    r'^[^\x00-\x20\x7f./\\:*?"<>|~-](?:[^\x00-\x1f\x7f/\\:*?"<>|]{0,62}[^\x00-\x20\x7f./\\:*?"<>|])?$'
+)
+"""What can be a file name everywhere; read alike by Python, Rust and ECMA 262."""
 _NUMBER = r"[0-9]{1,6}(?:\.[0-9]{1,17})?"
 _TOWARD = rf"^(?:neutral|{_NUMBER}K?|0?\.[0-9]{{1,17}},0?\.[0-9]{{1,17}})$"
 
@@ -223,8 +226,8 @@ class _Document(_Strict):
     """Where an editor finds the schema of this file."""
     schema_name: Annotated[Literal["grader-preset/1"], Field(alias="schema")]
     """The kind and number of this file's schema."""
-    name: Annotated[str, Field(pattern=_NAME)]
-    """The name it is called by: letters, digits, blanks, dots and hyphens, at most 64."""
+    name: Annotated[str, Field(pattern=NAME)]
+    """The name it is called by: what can be a file name everywhere, at most 64 characters."""
     description: Annotated[str, Field(max_length=1000)] = ""
     """One line on when to use it."""
 
@@ -268,7 +271,7 @@ def check(data: Mapping[str, Any]) -> Checked:
     """
     kind = _kind_of(data)
     try:
-        checked = _KINDS[kind].model_validate_json(json.dumps(data))
+        checked = _KINDS[kind].model_validate_json(json.dumps(data, default=_as_json))
     except ValidationError as error:
         raise _in_plain_words(error, kind) from None
     values = checked.settings.model_dump()
@@ -353,6 +356,12 @@ def _known_keys(model: type[BaseModel], place: Sequence[str]) -> list[str]:
         if isinstance(inner, type) and issubclass(inner, BaseModel):
             model = inner
     return [info.alias or name for name, info in model.model_fields.items()]
+
+
+def _as_json(value: object) -> object:
+    """Return a NumPy number as a number, anything else that JSON does not know as words."""
+    item = getattr(value, "item", None)
+    return item() if callable(item) and getattr(value, "ndim", None) == 0 else repr(value)
 
 
 def _short(value: object) -> str:
