@@ -78,7 +78,7 @@ def _as_picture(pixels: NDArray[Any]) -> NDArray[Any]:
             f"an array of shape {pixels.shape} is not a picture",
             hint="give (height, width, 3) or (height, width)",
         )
-    if pixels.dtype in (np.uint8, np.uint16):
+    if pixels.dtype.kind == "u" and pixels.dtype.itemsize <= 2:
         return np.ascontiguousarray(pixels, dtype=pixels.dtype.newbyteorder("="))
     if pixels.dtype.kind == "f":
         return np.ascontiguousarray(pixels, dtype=np.float32)

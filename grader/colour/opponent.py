@@ -12,10 +12,21 @@ from typing import Final
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from grader.colour.adaptation import TRANSFORMS
+from grader.colour.ciecam16 import ciecam16ucs_from_xyz, xyz_from_ciecam16ucs
 from grader.colour.white import D65_XY, xy_from_xyz, xyz_from_xy
 from grader.errors import PresetError
 from grader.model import XY, Matrix
+
+__all__ = [
+    "cast_from_xy",
+    "ciecam16ucs_from_xyz",
+    "cielab_from_xyz",
+    "oklab_from_xyz",
+    "xy_from_cast",
+    "xyz_from_ciecam16ucs",
+    "xyz_from_cielab",
+    "xyz_from_oklab",
+]
 
 Array = NDArray[np.float64]
 
@@ -41,11 +52,6 @@ _LMS_FROM_XYZ: Final[Matrix] = _LMS_FROM_XYZ_PUBLISHED / (_LMS_FROM_XYZ_PUBLISHE
 b would be -1.2e-4, a cast where there is none."""
 _XYZ_FROM_LMS: Final[Matrix] = np.asarray(np.linalg.inv(_LMS_FROM_XYZ), np.float64)
 _LMS_FROM_OKLAB: Final[Matrix] = np.asarray(np.linalg.inv(_OKLAB_FROM_LMS), np.float64)
-
-_CIECAM16_ADAPTING_CD_M2: Final = 64 / np.pi * 0.2
-_CIECAM16_BACKGROUND_Y: Final = 20.0
-_CIECAM16_SURROUND_C: Final = 0.69
-"""Average surround: c = 0.69, Nc = 1, F = 1."""
 
 
 def oklab_from_xyz(xyz: ArrayLike) -> Array:
@@ -93,74 +99,21 @@ def cielab_from_xyz(xyz: ArrayLike) -> Array:
     return np.stack([116 * fy - 16, 500 * (fx - fy), 200 * (fy - fz)], axis=-1)
 
 
-def ciecam16ucs_from_xyz(xyz: ArrayLike) -> Array:
-    """Return CIECAM16-UCS (J', a', b') of relative XYZ (D65, white at Y = 1).
-
-    Average surround, adapting luminance 64 / pi * 0.2 cd/m2, background Y = 20, illuminant discounted
-    (D = 1): only full adaptation leaves the reference white itself without a cast.
-
-    Parameters
-    ----------
-    xyz : (..., 3) array_like
-
-    Returns
-    -------
-    (..., 3) float64
-
-    References
-    ----------
-    .. [1] Li et al., "Comprehensive color solutions: CAM16, CAT16, and CAM16-UCS", Color Research &
-       Application 42(6), 2017, doi:10.1002/col.22131.
-
-    Examples
-    --------
-    >>> abs(ciecam16ucs_from_xyz(xyz_from_xy(D65_XY))).round(3)
-    array([100.,   0.,   0.])
-    """
-    compressed = _ciecam16_compressed(np.asarray(xyz, np.float64))
-    white = _ciecam16_compressed(_D65_XYZ)
-    r, g, b = np.moveaxis(compressed, -1, 0)
-    n = _CIECAM16_BACKGROUND_Y / 100
-    n_bb = 0.725 * (1 / n) ** 0.2
-    red_green, yellow_blue = r - 12 * g / 11 + b / 11, (r + g - 2 * b) / 9
-    hue = np.arctan2(yellow_blue, red_green)
-    achromatic = (compressed @ (2.0, 1.0, 0.05) - 0.305) / (white @ (2.0, 1.0, 0.05) - 0.305)
-    lightness = 100 * np.maximum(achromatic, 0.0) ** (_CIECAM16_SURROUND_C * (1.48 + np.sqrt(n)))
-    eccentricity = (np.cos(hue + 2) + 3.8) / 4
-    strength = 50000 / 13 * n_bb * eccentricity * np.hypot(red_green, yellow_blue)
-    t = strength / (compressed @ (1.0, 1.0, 1.05) + 0.305)
-    chroma = np.maximum(t, 0.0) ** 0.9 * np.sqrt(lightness / 100) * (1.64 - 0.29**n) ** 0.73
-    colourfulness = np.log1p(0.0228 * chroma * _ciecam16_level() ** 0.25) / 0.0228
-    return np.stack(
-        [
-            1.7 * lightness / (1 + 0.007 * lightness),
-            colourfulness * np.cos(hue),
-            colourfulness * np.sin(hue),
-        ],
-        axis=-1,
-    )
+def xyz_from_cielab(cielab: ArrayLike) -> Array:
+    """Return relative XYZ (..., 3) of CIELAB (..., 3): the inverse of `cielab_from_xyz`."""
+    light, a, b = np.moveaxis(np.asarray(cielab, np.float64), -1, 0)
+    fy = (light + 16) / 116
+    f = np.stack([fy + a / 500, fy, fy - b / 200], axis=-1)
+    return np.asarray(np.where(f > 6 / 29, f**3, (f - 4 / 29) * (108 / 841)) * _D65_XYZ)
 
 
-def _ciecam16_level() -> float:
-    """Return the luminance level adaptation factor F_L."""
-    five = 5 * _CIECAM16_ADAPTING_CD_M2
-    k4 = (1 / (five + 1)) ** 4
-    return float(0.2 * k4 * five + 0.1 * (1 - k4) ** 2 * np.cbrt(five))
-
-
-def _ciecam16_compressed(xyz: Array) -> Array:
-    """Return the adapted responses after compression."""
-    cone = TRANSFORMS["cat16"]
-    adapted = 100 * (xyz @ cone.T) / (cone @ _D65_XYZ)
-    power = (_ciecam16_level() * np.abs(adapted) / 100) ** 0.42
-    return np.asarray(np.sign(adapted) * 400 * power / (power + 27.13) + 0.1)
-
-
-_FROM_XYZ: Final[dict[str, Callable[[ArrayLike], Array]]] = {
-    "oklab": oklab_from_xyz,
-    "ciecam16": ciecam16ucs_from_xyz,
-    "cielab": cielab_from_xyz,
+_Conversion = Callable[[ArrayLike], Array]
+_SPACES: Final[dict[str, tuple[_Conversion, _Conversion, float]]] = {
+    "oklab": (oklab_from_xyz, xyz_from_oklab, 1.0),
+    "ciecam16": (ciecam16ucs_from_xyz, xyz_from_ciecam16ucs, 100.0),
+    "cielab": (cielab_from_xyz, xyz_from_cielab, 100.0),
 }
+"""From XYZ, to XYZ, and the lightness of white."""
 
 
 def cast_from_xy(xy: ArrayLike, opponent: str = "oklab") -> tuple[float, float]:
@@ -188,14 +141,15 @@ def cast_from_xy(xy: ArrayLike, opponent: str = "oklab") -> tuple[float, float]:
     >>> round(yellow_blue, 2), round(green_magenta, 2)
     (0.15, 0.07)
     """
-    _, a, b = _from_xyz(opponent)(xyz_from_xy(xy))
+    from_xyz, _, _ = _space(opponent)
+    _, a, b = from_xyz(xyz_from_xy(xy))
     return float(b), float(a)
 
 
 def xy_from_cast(yellow_blue: float, green_magenta: float, opponent: str = "oklab") -> XY:
     """Return the light that puts a neutral there: the inverse of `cast_from_xy`.
 
-    Newton's method on X and Z at Y = 1; good to 1e-10 for any light that can exist.
+    Newton's method on the lightness that makes Y = 1; the rest is closed form.
 
     Raises
     ------
@@ -208,34 +162,29 @@ def xy_from_cast(yellow_blue: float, green_magenta: float, opponent: str = "okla
     >>> round(x, 6), round(y, 6)
     (0.4476, 0.4075)
     """
-    from_xyz = _from_xyz(opponent)
-    target = np.array([green_magenta, yellow_blue])
-    xyz = _D65_XYZ.copy()
-    for _ in range(60):
-        around = from_xyz(xyz + _NEWTON_STEPS)[:, 1:]
-        miss = target - around[0]
-        if np.abs(miss).max() <= 1e-13 * max(1.0, float(np.abs(target).max())):
-            break
-        jacobian = (around[1::2] - around[2::2]).T / (2 * _NEWTON_STEP)
-        step = np.linalg.solve(jacobian, miss)
-        xyz[[0, 2]] += step * min(1.0, 0.5 / float(np.abs(step).max()))
-    if not np.allclose(around[0], target, rtol=0, atol=1e-6 * max(1.0, float(np.abs(target).max()))):
+    _, to_xyz, lightness = _space(opponent)
+    step = 1e-6 * lightness
+    with np.errstate(all="ignore"):
+        for _ in range(50):
+            at = np.array([lightness - step, lightness, lightness + step])
+            xyz = to_xyz(np.stack([at, np.full(3, green_magenta), np.full(3, yellow_blue)], axis=-1))
+            below, here, above = xyz[:, 1]
+            if abs(here - 1.0) < 1e-14:
+                break
+            lightness += float(
+                np.clip((1.0 - here) * 2 * step / (above - below), -0.3 * lightness, 0.3 * lightness)
+            )
+    if not abs(here - 1.0) < 1e-9 or not np.isfinite(xyz).all() or xyz[1].sum() <= 0:
         raise PresetError(
             f"no light gives the cast yellow-blue {yellow_blue:g}, green-magenta {green_magenta:g}"
         )
-    x, y = xy_from_xyz(xyz)
+    x, y = xy_from_xyz(xyz[1])
     return float(x), float(y)
 
 
-_NEWTON_STEP: Final = 1e-5
-_NEWTON_STEPS: Final[Array] = _NEWTON_STEP * np.array(
-    [[0, 0, 0], [1, 0, 0], [-1, 0, 0], [0, 0, 1], [0, 0, -1]], dtype=np.float64
-)
-
-
-def _from_xyz(opponent: str) -> Callable[[ArrayLike], Array]:
-    if opponent not in _FROM_XYZ:
+def _space(opponent: str) -> tuple[_Conversion, _Conversion, float]:
+    if opponent not in _SPACES:
         raise PresetError(
-            f"there is no opponent space called {opponent!r}", hint=f"choose one of {', '.join(_FROM_XYZ)}"
+            f"there is no opponent space called {opponent!r}", hint=f"choose one of {', '.join(_SPACES)}"
         )
-    return _FROM_XYZ[opponent]
+    return _SPACES[opponent]
