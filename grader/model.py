@@ -147,6 +147,8 @@ class Metadata:
     """A TIFF structure (II or MM first) with IFD0, Exif and GPS directories."""
     xmp: bytes | None = None
     iptc: bytes | None = None
+    notes: tuple[str, ...] = ()
+    """What could not be carried over, in plain words."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)

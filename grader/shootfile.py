@@ -1,0 +1,104 @@
+"""What a person tells about a shoot: a frame to match, known neutrals, boundaries; from files to values."""
+
+from __future__ import annotations
+
+import csv
+import os
+from collections.abc import Iterable
+from dataclasses import replace
+
+import numpy as np
+
+from grader import cast as casts
+from grader import files
+from grader.colour.white import linear_from_xy, xy_from_linear
+from grader.errors import MissingFile, PresetError
+from grader.model import XY, Fixed, ReadLimits, Recipe
+
+_MAX_ROWS = 100_000
+
+
+def resolve_toward(settings: Recipe | Fixed, limits: ReadLimits) -> Recipe | Fixed:
+    """Return the settings with a frame to match replaced by the white that it shows.
+
+    The aim is where a neutral lies in that frame *as it looks*, so that the batch lands on its look.
+
+    Raises
+    ------
+    PresetError
+        No light could be measured in that frame.
+    """
+    if isinstance(settings, Fixed) or not os.path.isfile(settings.toward):  # noqa: PTH113
+        return settings
+    cast = casts.measure(files.read_reduced(settings.toward, limits), settings)
+    if cast.white_xy is None:
+        raise PresetError(
+            "no light could be measured in the frame to match", path=settings.toward, hint="choose another frame"
+        )
+    x, y = as_decoded(cast.white_xy, cast.header.daylight_from_decoded)
+    return replace(settings, toward=f"{x!r},{y!r}")
+
+
+def as_decoded(light_xy: XY, daylight_from_decoded: np.ndarray | None) -> XY:
+    """Return the chromaticity that this light has in the frame as decoded, the camera's balance baked in."""
+    if daylight_from_decoded is None:
+        return light_xy
+    return xy_from_linear(np.linalg.solve(daylight_from_decoded, linear_from_xy(light_xy)))
+
+
+def known_lights(cards: Iterable[str], limits: ReadLimits) -> dict[str, XY]:
+    """Measure the neutrals that ``FRAME@X,Y,W,H`` name; return the light of each frame.
+
+    Raises
+    ------
+    PresetError
+        A text is not of that form, or the patch is no usable neutral.
+    """
+    lights: dict[str, XY] = {}
+    for text in cards:
+        path, _, box = text.rpartition("@")
+        if not path:
+            raise PresetError(f"--grey-card {text!r} is not FRAME@X,Y,W,H", hint="give the patch in pixels")
+        sample = casts.sample_patch(files.read(path, limits), parse_box(box))
+        lights[path] = sample.light_xy
+    return lights
+
+
+def parse_box(text: str) -> tuple[float, float, float, float]:
+    """Return X,Y,W,H: pixels, or fractions of the frame where all four are at most 1.
+
+    Examples
+    --------
+    >>> parse_box("10,20,300,200")
+    (10.0, 20.0, 300.0, 200.0)
+    """
+    try:
+        x, y, width, height = map(float, text.split(","))
+    except ValueError:
+        raise PresetError(f"the patch {text!r} is not X,Y,W,H", hint="write four numbers, as 120,80,60,60") from None
+    return x, y, width, height
+
+
+def read_stretches(path: str | os.PathLike[str] | None) -> list[tuple[str, str]] | None:
+    """Read stretches fixed by hand: rows of first file, last file (further columns are ignored).
+
+    Raises
+    ------
+    MissingFile
+        The file cannot be opened.
+    PresetError
+        A row has fewer than two names.
+    """
+    if path is None:
+        return None
+    try:
+        with open(path, newline="", encoding="utf-8-sig", errors="surrogateescape") as file:  # noqa: PTH123
+            rows = [row for _, row in zip(range(_MAX_ROWS), csv.reader(file), strict=False) if any(row)]
+    except OSError as error:
+        raise MissingFile(f"cannot be opened ({error.strerror or error})", path=path) from error
+    for number, row in enumerate(rows, start=1):
+        if len(row) < 2 or not row[0].strip() or not row[1].strip():
+            raise PresetError(f"row {number} is not 'first file,last file'", path=path)
+    if rows and rows[0][0].strip().lower() == "first file":
+        rows = rows[1:]
+    return [(row[0].strip(), row[1].strip()) for row in rows]
