@@ -9,7 +9,7 @@ import os
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import asdict, dataclass, field
 from pathlib import Path, PurePath
-from typing import Any
+from typing import Any, Self
 
 from grader import cast as casts
 from grader import jobs
@@ -93,7 +93,9 @@ def neutralise(
         yield from batch.grade()
 
 
-def apply(preset: Preset | Recipe | Fixed, paths: Paths, out: str | os.PathLike[str], **how: Any) -> Iterator[Line]:
+def apply(
+    preset: Preset | Recipe | Fixed, paths: Paths, out: str | os.PathLike[str], **how: Any
+) -> Iterator[Line]:
     """Apply a saved preset to a batch; the arguments after ``out`` are those of `neutralise`."""
     return neutralise(paths, out, preset=preset, **how)
 
@@ -145,7 +147,7 @@ class Batch:
         self._lock: Any = None
         self.run: Run
 
-    def __enter__(self) -> Batch:
+    def __enter__(self) -> Self:
         """Take the target folder and open the log."""
         if self.out is not None and not self.options.dry_run:
             self._lock = _take(self.out)
@@ -284,7 +286,9 @@ class Batch:
 
     # ------------------------------------------------------------ jobs
 
-    def _run_jobs(self, stage: str, function: Callable[[Any], Any], work: list[Any]) -> Iterator[Outcome[Any, Any]]:
+    def _run_jobs(
+        self, stage: str, function: Callable[[Any], Any], work: list[Any]
+    ) -> Iterator[Outcome[Any, Any]]:
         self._progress(stage, 0, len(work))
         for done, outcome in enumerate(run_jobs(function, work, self.options.pool, self.stop), start=1):
             self._progress(stage, done, len(work))
@@ -306,7 +310,11 @@ class Batch:
             target=str(self._target(path)),
             settings=self.settings,
             limits=self.options.limits,
-            sha256=earlier["sha256"] if earlier is not None else None if planned is None else planned["sha256"],
+            sha256=earlier["sha256"]
+            if earlier is not None
+            else None
+            if planned is None
+            else planned["sha256"],
             correction=correction,
             overwrite=self.options.overwrite or self.run.earlier is not None,
             known_output_sha256=None if earlier is None else earlier["output"]["sha256"],
@@ -415,7 +423,8 @@ def _take(out: Path) -> Any:
         ) from error
     except OSError as error:
         raise WriteFailed(
-            f"the output folder cannot be written ({error.strerror or error})", path=out, hint="choose another --out"
+            f"the output folder cannot be written ({error.strerror or error})",
+            path=out,
+            hint="choose another --out",
         ) from error
     return lock
-

@@ -57,7 +57,9 @@ def connect(address: str) -> Iterator[tuple[Any, int]]:
 def _local_cluster(distributed: Any, address: str) -> Any:
     count = address.removeprefix("local:")
     if not count.isdecimal() or int(count) < 1:
-        raise PresetError(f"--cluster {address!r} is not understood", hint="write local:N with N of 1 or more")
+        raise PresetError(
+            f"--cluster {address!r} is not understood", hint="write local:N with N of 1 or more"
+        )
     return distributed.LocalCluster(
         n_workers=int(count), threads_per_worker=1, processes=True, dashboard_address=None
     )
@@ -74,10 +76,13 @@ def _check_versions(client: Any, address: str) -> None:
     ours = worker_version()
     theirs: dict[str, str] = client.run(worker_version)
     if not theirs:
-        raise PresetError(f"the scheduler at {address} has no workers", hint="start some with: dask worker " + address)
+        raise PresetError(
+            f"the scheduler at {address} has no workers", hint="start some with: dask worker " + address
+        )
     other = {worker: version for worker, version in theirs.items() if version != ours}
     if other:
         worker, version = next(iter(other.items()))
         raise PresetError(
-            f"worker {worker} runs grader {version}, this is {ours}", hint="install the same version everywhere"
+            f"worker {worker} runs grader {version}, this is {ours}",
+            hint="install the same version everywhere",
         )

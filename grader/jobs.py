@@ -132,5 +132,7 @@ def _make_folder(target: str) -> None:
         os.makedirs(folder, exist_ok=True)  # noqa: PTH103
     except OSError as error:
         raise WriteFailed(
-            f"the output folder cannot be made ({error.strerror or error})", path=folder, hint="choose another --out"
+            f"the output folder cannot be made ({error.strerror or error})",
+            path=folder,
+            hint="choose another --out",
         ) from error

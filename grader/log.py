@@ -164,7 +164,9 @@ def _read_lines(file: BinaryIO, log: Log, path: str) -> None:
 # ---------------------------------------------------------------- values -> lines
 
 
-def run_line(*, version: str, command: Iterable[str], preset: Mapping[str, Any], started: str, **facts: Any) -> Line:
+def run_line(
+    *, version: str, command: Iterable[str], preset: Mapping[str, Any], started: str, **facts: Any
+) -> Line:
     """Return the first line of a log."""
     return {
         "kind": "run",
@@ -353,4 +355,6 @@ def _array_or_none(value: Any) -> Any:
 def _evidence_from(value: Mapping[str, Any]) -> Evidence:
     packed = base64.b64decode(value["zlib"], validate=True)
     raw = zlib.decompressobj().decompress(packed, _MAX_CANDIDATES)
-    return Evidence(grid=value["grid"], log_likelihood=np.frombuffer(raw, np.uint8), cells=int(value["cells"]))
+    return Evidence(
+        grid=value["grid"], log_likelihood=np.frombuffer(raw, np.uint8), cells=int(value["cells"])
+    )

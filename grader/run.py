@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-import datetime
+import datetime as dt
 import time
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
@@ -84,7 +84,9 @@ class Run:
         self._writer.write(summary)
         self._writer.close()
         if not summary["interrupted"]:
-            write_atomic(self._writer.path, b"".join(_ordered(read_log(self._writer.path), order)), overwrite=True)
+            write_atomic(
+                self._writer.path, b"".join(_ordered(read_log(self._writer.path), order)), overwrite=True
+            )
 
     def close(self) -> None:
         """Close the log as it is."""
@@ -127,7 +129,7 @@ def mean_cast(casts: Iterable[Mapping[str, Any] | None]) -> dict[str, float] | N
 
 def now() -> str:
     """Return the local time with its offset, ISO 8601."""
-    return datetime.datetime.now().astimezone().isoformat(timespec="seconds")
+    return dt.datetime.now().astimezone().isoformat(timespec="seconds")
 
 
 def open_earlier(path: Path | None, *, resume: bool, overwrite: bool) -> Log | None:

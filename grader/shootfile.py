@@ -33,7 +33,9 @@ def resolve_toward(settings: Recipe | Fixed, limits: ReadLimits) -> Recipe | Fix
     cast = casts.measure(files.read_reduced(settings.toward, limits), settings)
     if cast.white_xy is None:
         raise PresetError(
-            "no light could be measured in the frame to match", path=settings.toward, hint="choose another frame"
+            "no light could be measured in the frame to match",
+            path=settings.toward,
+            hint="choose another frame",
         )
     x, y = as_decoded(cast.white_xy, cast.header.daylight_from_decoded)
     return replace(settings, toward=f"{x!r},{y!r}")
@@ -75,7 +77,9 @@ def parse_box(text: str) -> tuple[float, float, float, float]:
     try:
         x, y, width, height = map(float, text.split(","))
     except ValueError:
-        raise PresetError(f"the patch {text!r} is not X,Y,W,H", hint="write four numbers, as 120,80,60,60") from None
+        raise PresetError(
+            f"the patch {text!r} is not X,Y,W,H", hint="write four numbers, as 120,80,60,60"
+        ) from None
     return x, y, width, height
 
 

@@ -13,10 +13,9 @@ from pathlib import Path, PurePath
 from grader.errors import MissingFile, PresetError
 
 RAW_SUFFIXES = frozenset(
-    ".3fr .arw .bay .cr2 .cr3 .crw .dcr .dng .erf .fff .iiq .k25 .kdc .mef .mos .mrw .nef .nrw .orf .pef .raf "
-    ".raw .rw2 .rwl .sr2 .srf .srw .x3f".split()
+    [".3fr", ".arw", ".bay", ".cr2", ".cr3", ".crw", ".dcr", ".dng", ".erf", ".fff", ".iiq", ".k25", ".kdc", ".mef", ".mos", ".mrw", ".nef", ".nrw", ".orf", ".pef", ".raf", ".raw", ".rw2", ".rwl", ".sr2", ".srf", ".srw", ".x3f"]
 )
-PICTURE_SUFFIXES = RAW_SUFFIXES | frozenset(".tif .tiff .jpg .jpeg .jpe .png".split())
+PICTURE_SUFFIXES = RAW_SUFFIXES | frozenset([".tif", ".tiff", ".jpg", ".jpeg", ".jpe", ".png"])
 """Suffixes that make a file in a *folder* part of a batch; a file named by itself is always taken."""
 
 
@@ -118,7 +117,9 @@ def check_target_folder(sources: Iterable[Source], out: str | os.PathLike[str]) 
     for source in sources:
         if os.path.dirname(os.path.realpath(source.path)) == real_out:  # noqa: PTH120
             raise PresetError(
-                "the output folder is the folder of the originals", path=str(out), hint="choose another --out folder"
+                "the output folder is the folder of the originals",
+                path=str(out),
+                hint="choose another --out folder",
             )
 
 

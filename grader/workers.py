@@ -128,11 +128,14 @@ def as_grader_error(error: BaseException) -> GraderError:
     if isinstance(error, GraderError):
         return error
     if isinstance(error, MemoryError):
-        return WorkerFailed("there is not enough memory for this frame", hint="use fewer --workers or raise --memory")
+        return WorkerFailed(
+            "there is not enough memory for this frame", hint="use fewer --workers or raise --memory"
+        )
     where = traceback.extract_tb(error.__traceback__)
     place = f" at {os.path.basename(where[-1].filename)}:{where[-1].lineno}" if where else ""  # noqa: PTH119
     return GraderError(
-        f"internal error ({type(error).__name__}: {error}{place})", hint="please report it with this line of the log"
+        f"internal error ({type(error).__name__}: {error}{place})",
+        hint="please report it with this line of the log",
     )
 
 
@@ -178,9 +181,14 @@ def _worker_error(error: BaseException) -> GraderError:
         )
     if name == "ProcessExpired":
         code = getattr(error, "exitcode", None)
-        how = f"signal {signal.Signals(-code).name}" if isinstance(code, int) and code < 0 else f"exit code {code}"
+        how = (
+            f"signal {signal.Signals(-code).name}"
+            if isinstance(code, int) and code < 0
+            else f"exit code {code}"
+        )
         return WorkerFailed(
-            f"the worker process died on this frame ({how})", hint="the file may crash its decoder; open it by itself"
+            f"the worker process died on this frame ({how})",
+            hint="the file may crash its decoder; open it by itself",
         )
     if name == "KilledWorker":
         return WorkerFailed("the cluster lost its workers on this frame", hint="see the workers' own logs")
@@ -259,4 +267,4 @@ def _on_cluster(pool: Pool) -> Iterator[tuple[Submit, int]]:
     from grader.cluster import connect  # noqa: PLC0415 - distributed is an extra
 
     with connect(str(pool.cluster)) as (executor, threads):
-        yield (lambda function, job: executor.submit(function, job)), 2 * threads
+        yield (executor.submit), 2 * threads

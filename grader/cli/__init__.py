@@ -26,22 +26,22 @@ _COMMANDS: Final = {
 class _Commands(click.Group):
     """A group whose commands load when they are used."""
 
-    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002
+    def list_commands(self, ctx: click.Context) -> list[str]:
         return list(_COMMANDS)
 
-    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:  # noqa: ARG002
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
         home = _COMMANDS.get(cmd_name)
         if home is None:
             return None
         command: click.Command = getattr(import_module(home[0]), cmd_name)
         return command
 
-    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:  # noqa: ARG002
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
         with formatter.section("Commands"):
             formatter.write_dl([(name, text) for name, (_, text) in _COMMANDS.items()])
 
 
-def _version(context: click.Context, _parameter: click.Parameter, wanted: bool) -> None:  # noqa: FBT001
+def _version(context: click.Context, _parameter: click.Parameter, wanted: bool) -> None:
     if wanted and not context.resilient_parsing:
         from grader import __version__  # noqa: PLC0415 - only when asked
 
@@ -63,7 +63,9 @@ Each command has its own --help.  Exit: 0 all done; 2 usage or preset; 3 some fr
 done; 4 beyond tolerance; 5 nothing could be read; 6 cannot write; 130 interrupted, resumable; 1 a fault of
 grader's own.""",
 )
-@click.option("--version", is_flag=True, is_eager=True, expose_value=False, callback=_version, help="Show the version.")
+@click.option(
+    "--version", is_flag=True, is_eager=True, expose_value=False, callback=_version, help="Show the version."
+)
 def grader() -> None:
     """Measure, remove and track colour casts over whole photo shoots."""
 

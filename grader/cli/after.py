@@ -18,8 +18,12 @@ Examples:
 Pictures are read from where the log says the originals are; where they are gone the report says so."""
 )
 @click.argument("log", type=click.Path(dir_okay=False))
-@click.option("--out", "report_file", type=click.Path(dir_okay=False), metavar="FILE", help="The report, one HTML file.")
-@click.option("--contact-sheet", type=click.Path(dir_okay=False), metavar="FILE.jpg", help="Before/after sheets.")
+@click.option(
+    "--out", "report_file", type=click.Path(dir_okay=False), metavar="FILE", help="The report, one HTML file."
+)
+@click.option(
+    "--contact-sheet", type=click.Path(dir_okay=False), metavar="FILE.jpg", help="Before/after sheets."
+)
 @click.option("--csv", "csv_file", type=click.Path(dir_okay=False), metavar="FILE", help="One row a frame.")
 def report(log: str, report_file: str | None, contact_sheet: str | None, csv_file: str | None) -> int:
     """Make the report of a finished run from its LOG."""
@@ -51,13 +55,24 @@ Exit 0: all as logged; 3: something differs; 5: there is no readable log.  The r
 is an estimate like any other: a large one asks for your eye, it is no proof."""
 )
 @click.argument("folder", type=click.Path(file_okay=False))
-@click.option("--log", type=click.Path(dir_okay=False), metavar="FILE", help="The log. [DIR/grader-log.jsonl]")
-@click.option("--tolerance", type=click.FloatRange(min=0), metavar="DE2000", help="Largest residual cast of an output.")
-@click.option("--workers", type=click.IntRange(min=0), metavar="N", help="Processes; 0 = this one only. [cores]")
+@click.option(
+    "--log", type=click.Path(dir_okay=False), metavar="FILE", help="The log. [DIR/grader-log.jsonl]"
+)
+@click.option(
+    "--tolerance", type=click.FloatRange(min=0), metavar="DE2000", help="Largest residual cast of an output."
+)
+@click.option(
+    "--workers", type=click.IntRange(min=0), metavar="N", help="Processes; 0 = this one only. [cores]"
+)
 @click.option("--json", "as_json", is_flag=True, help="Write one JSON object a frame to stdout.")
 @click.option("--quiet", is_flag=True, help="No closing words.")
-def check(  # noqa: PLR0913 - one parameter an option
-    folder: str, log: str | None, tolerance: float | None, workers: int | None, as_json: bool, quiet: bool  # noqa: FBT001
+def check(
+    folder: str,
+    log: str | None,
+    tolerance: float | None,
+    workers: int | None,
+    as_json: bool,
+    quiet: bool,
 ) -> int:
     """Re-read the finished run in FOLDER and tell what differs from its log."""
     from grader.checking import check as check_run  # noqa: PLC0415 - after --help

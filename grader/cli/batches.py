@@ -79,9 +79,15 @@ Exit 4 tells that a frame lies further than --tolerance from its stretch, or fro
     help="Largest Delta E 2000 of a mid grey from the stretch's light (or --against).",
 )
 @click.option("--against", metavar="FRAME|PRESET", help="Measure every frame against this one's light.")
-@click.option("--csv", "csv_file", type=click.Path(dir_okay=False), metavar="FILE", help="Write one row a frame.")
-@click.option("--report", type=click.Path(dir_okay=False), metavar="FILE", help="Write the report as one HTML file.")
-@click.option("--contact-sheet", type=click.Path(dir_okay=False), metavar="FILE.jpg", help="Write before/after sheets.")
+@click.option(
+    "--csv", "csv_file", type=click.Path(dir_okay=False), metavar="FILE", help="Write one row a frame."
+)
+@click.option(
+    "--report", type=click.Path(dir_okay=False), metavar="FILE", help="Write the report as one HTML file."
+)
+@click.option(
+    "--contact-sheet", type=click.Path(dir_okay=False), metavar="FILE.jpg", help="Write before/after sheets."
+)
 @click.option("--resume", is_flag=True, help="Use what an earlier --log already measured.")
 @click.option("--overwrite", is_flag=True, help="Replace a log that is there already.")
 @options.running
@@ -92,7 +98,7 @@ def measure(paths: tuple[str, ...], **given: Any) -> int:
     preset = options.chosen_preset(_load(given.get("preset")), given)
     batch = _batch(paths, None, preset, given)
     batch.against = given.get("against")
-    code = _run(batch, given, lambda: batch.measure())
+    code = _run(batch, given, batch.measure)
     if not given["as_json"]:
         click.echo(table(batch.summary, colour=_coloured(), width=_width()), nl=False)
     _write_extras(batch, given)
@@ -102,7 +108,7 @@ def measure(paths: tuple[str, ...], **given: Any) -> int:
 def _grade(preset: Preset | None, paths: tuple[str, ...], given: dict[str, Any]) -> int:
     chosen = options.chosen_preset(preset, given)
     batch = _batch(paths, given["out"], chosen, given)
-    code = _run(batch, given, lambda: batch.grade())
+    code = _run(batch, given, batch.grade)
     _write_extras(batch, given)
     return code
 

@@ -52,7 +52,11 @@ def stopping_on_interrupt(stop: Stop) -> Iterator[None]:
 
     def ask(_signal: int, _frame: object) -> None:
         stop.ask()
-        words = "stopping at once" if stop.at_once else "finishing the frames in flight; Ctrl-C again stops at once"
+        words = (
+            "stopping at once"
+            if stop.at_once
+            else "finishing the frames in flight; Ctrl-C again stops at once"
+        )
         click.echo(f"\n{words}", err=True)
 
     before = {number: signal.signal(number, ask) for number in (signal.SIGINT, signal.SIGTERM)}

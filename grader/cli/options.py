@@ -37,16 +37,26 @@ inputs = _options(
 recipe = _options(
     click.option("--preset", metavar="NAME|FILE", help="A saved recipe (see: grader presets)."),
     click.option(
-        "--keep-yellow-blue", type=float, metavar="F", help="Fraction of the yellow-blue cast left in, 0 to 1. [0]"
+        "--keep-yellow-blue",
+        type=float,
+        metavar="F",
+        help="Fraction of the yellow-blue cast left in, 0 to 1. [0]",
     ),
     click.option(
-        "--keep-green-magenta", type=float, metavar="F", help="Fraction of the green-magenta cast left in, 0 to 1. [0]"
+        "--keep-green-magenta",
+        type=float,
+        metavar="F",
+        help="Fraction of the green-magenta cast left in, 0 to 1. [0]",
     ),
     click.option(
-        "--toward", metavar="AIM", help="White to aim at: neutral, a temperature in kelvin, or a frame to match. [neutral]"
+        "--toward",
+        metavar="AIM",
+        help="White to aim at: neutral, a temperature in kelvin, or a frame to match. [neutral]",
     ),
     click.option(
-        "--opponent", type=click.Choice(["oklab", "ciecam16", "cielab"]), help="Opponent space of the figures. [oklab]"
+        "--opponent",
+        type=click.Choice(["oklab", "ciecam16", "cielab"]),
+        help="Opponent space of the figures. [oklab]",
     ),
     click.option(
         "--adaptation",
@@ -67,7 +77,10 @@ recipe = _options(
 
 shoot = _options(
     click.option(
-        "--clock", multiple=True, metavar="BODY=SECONDS", help="Seconds to add to a body's clock (repeatable)."
+        "--clock",
+        multiple=True,
+        metavar="BODY=SECONDS",
+        help="Seconds to add to a body's clock (repeatable).",
     ),
     click.option(
         "--grey-card",
@@ -75,11 +88,19 @@ shoot = _options(
         metavar="FRAME@X,Y,W,H",
         help="A known neutral in a frame; pins the light of its stretch (repeatable).",
     ),
-    click.option("--stretches", type=_FILE, metavar="CSV", help="Stretches fixed by hand: first file, last file."),
+    click.option(
+        "--stretches", type=_FILE, metavar="CSV", help="Stretches fixed by hand: first file, last file."
+    ),
 )
 
 output = _options(
-    click.option("--out", required=True, type=click.Path(file_okay=False), metavar="DIR", help="Folder for the results."),
+    click.option(
+        "--out",
+        required=True,
+        type=click.Path(file_okay=False),
+        metavar="DIR",
+        help="Folder for the results.",
+    ),
     click.option(
         "--format",
         "output_format",
@@ -87,14 +108,20 @@ output = _options(
         help="File format to write; dng: a copy of a DNG that opens with the planned balance. [same; RAW: tiff]",
     ),
     click.option("--space", metavar="SPACE", help=f"Colour space to write: {_SPACES}. [source]"),
-    click.option("--tone", type=click.Choice(["standard", "linear"]), help="Tone curve of RAW frames. [standard]"),
-    click.option("--exposure", type=float, metavar="EV", help="Brighten (+) or darken (-) all frames alike. [0]"),
+    click.option(
+        "--tone", type=click.Choice(["standard", "linear"]), help="Tone curve of RAW frames. [standard]"
+    ),
+    click.option(
+        "--exposure", type=float, metavar="EV", help="Brighten (+) or darken (-) all frames alike. [0]"
+    ),
     click.option("--strip-location", is_flag=True, help="Leave the place of capture out of the results."),
     click.option("--overwrite", is_flag=True, help="Replace results that are there already."),
     click.option("--resume", is_flag=True, help="Go on with an earlier run into the same folder."),
     click.option("--dry-run", is_flag=True, help="Measure and plan, write nothing."),
     click.option("--report", type=_FILE, metavar="FILE", help="Write the report as one HTML file."),
-    click.option("--contact-sheet", type=_FILE, metavar="FILE.jpg", help="Write before/after pictures on sheets."),
+    click.option(
+        "--contact-sheet", type=_FILE, metavar="FILE.jpg", help="Write before/after pictures on sheets."
+    ),
 )
 
 running = _options(
@@ -197,7 +224,9 @@ def _clock(text: str) -> tuple[str, float]:
     try:
         return body, float(seconds)
     except ValueError:
-        raise PresetError(f"--clock {text!r} is not BODY=SECONDS", hint="write for example --clock B=-3.5") from None
+        raise PresetError(
+            f"--clock {text!r} is not BODY=SECONDS", hint="write for example --clock B=-3.5"
+        ) from None
 
 
 def _bytes(text: str) -> int:
@@ -208,5 +237,7 @@ def _bytes(text: str) -> int:
     except ValueError:
         size = 0
     if size < 1 << 20:
-        raise PresetError(f"--memory {text!r} is not a size of a megabyte or more", hint="write for example 8G")
+        raise PresetError(
+            f"--memory {text!r} is not a size of a megabyte or more", hint="write for example 8G"
+        )
     return size
