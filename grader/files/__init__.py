@@ -1,0 +1,28 @@
+"""Photographs in and out: raw, TIFF, JPEG and PNG files, their profiles and their metadata.
+
+``Frame.encoding`` holds what a writer needs to write the same kind of file again:
+
+================  ==================================================================================
+key               meaning
+================  ==================================================================================
+kind              ``grey``, ``rgb``, ``cmyk`` or ``lab``: the colours that the file stored
+bits              significant bits of a stored sample
+sample            ``uint`` or ``float``
+alpha             ``straight``, ``associated`` (the frame's colours are divided by it),
+                  ``kept-associated`` (they are not) or ``unspecified``
+untagged          name of the space that was taken because the file embeds no profile
+compression       TIFF: the tag's number;  predictor, planar (bool), min_is_white (bool), byteorder
+                  (``<`` or ``>``), bigtiff (bool), tile ((length, width) or None), rows_per_strip,
+                  sample_bytes
+resolution        TIFF: ((x, 1), (y, 1), unit) as stored
+quantisation      JPEG: one table of 64 in natural order for each component;  sampling ((h, v), ...),
+                  progressive (bool), stored_rgb (bool), dpi
+pixels_per_metre  PNG: the pHYs chunk;  interlaced (bool), colour_chunks ((type, body), ...)
+================  ==================================================================================
+"""
+
+from grader.files.profile_build import profile_bytes
+from grader.files.reading import kind_of, read, read_reduced
+from grader.files.writing import suffix_for, write
+
+__all__ = ["kind_of", "profile_bytes", "read", "read_reduced", "suffix_for", "write"]

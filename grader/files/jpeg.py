@@ -1,0 +1,123 @@
+"""JPEG files in and out, through Pillow (libjpeg-turbo)."""
+
+from __future__ import annotations
+
+import hashlib
+import io
+from pathlib import Path
+from typing import Any, Final
+
+import numpy as np
+from PIL import Image, JpegImagePlugin
+
+from grader.errors import DamagedFile
+from grader.files import jpeg_markers, metadata, raster
+from grader.model import Frame, Metadata, ReadLimits
+
+_KINDS: Final[dict[str, raster.Kind]] = {"L": "grey", "RGB": "rgb", "CMYK": "cmyk"}
+_DEFAULT_QUALITY: Final = 95
+
+
+def read(path: Path, limits: ReadLimits) -> Frame:
+    """Return the (first) picture of a JPEG file.
+
+    Raises
+    ------
+    DamagedFile
+        It is cut short, or its coded data do not make a whole picture.
+    UnsupportedFile
+        It is coded in a way that is not decoded, or too large.
+    """
+    data = path.read_bytes()
+    layout = jpeg_markers.parse(data)
+    raster.check_size(layout.width_px, layout.height_px, limits)
+    if not layout.ended:
+        raise DamagedFile(
+            "the file ends before the picture does", hint="copy it again from the card or the backup"
+        )
+    image = JpegImagePlugin.JpegImageFile(io.BytesIO(data))
+    decoded = _decoded(image, layout)
+    decoded.facts, decoded.metadata = metadata.from_jpeg_info(image.info, limits)
+    decoded.space = raster.space_by_exif(decoded.metadata)
+    if "mp" in image.info:
+        decoded.flag(
+            "page-chosen", "the file holds further pictures (views or a gain map); the first was taken"
+        )
+    return raster.frame(decoded, path, hashlib.sha256(data).hexdigest())
+
+
+def _decoded(image: Any, layout: jpeg_markers.Layout) -> raster.Decoded:
+    image.load()
+    samples = np.asarray(image)
+    samples = samples[..., None] if samples.ndim == 2 else samples
+    decoded = raster.Decoded(samples, _KINDS[image.mode], 8, "jpeg", icc=image.info.get("icc_profile"))
+    decoded.encoding = _encoding(image, layout)
+    return decoded
+
+
+def _encoding(image: Any, layout: jpeg_markers.Layout) -> dict[str, Any]:
+    """Return what a writer needs to write a JPEG of the same quality (keys: see ``grader.files``)."""
+    return {
+        "quantisation": tuple(tuple(image.quantization.get(c.table, ())) for c in layout.components),
+        "sampling": tuple((c.horizontal, c.vertical) for c in layout.components),
+        "progressive": layout.progressive,
+        "stored_rgb": image.info.get("adobe_transform") == 0 and len(layout.components) == 3,
+        "dpi": image.info.get("dpi") if image.info.get("jfif_unit") else None,
+    }
+
+
+def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
+    """Return the frame as JPEG: the source's quantisation and sampling, or better; else quality 95 and 4:4:4."""
+    pixels = raster.to_eight_bits(frame.pixels)
+    if raster.is_grey(frame):
+        pixels = np.ascontiguousarray(pixels[..., 0])
+    buffer = io.BytesIO()
+    options: dict[str, Any] = {"quality": _DEFAULT_QUALITY, "subsampling": 0, "optimize": True}
+    options |= _as_source(frame, grey=pixels.ndim == 2)
+    if icc is not None:
+        options["icc_profile"] = icc
+    options["extra"] = metadata.jpeg_segments(carried)
+    Image.fromarray(pixels).save(buffer, "JPEG", **options)
+    return buffer.getvalue()
+
+
+def _as_source(frame: Frame, *, grey: bool) -> dict[str, Any]:
+    options: dict[str, Any] = {}
+    encoding = frame.encoding
+    if encoding.get("progressive"):
+        options["progressive"] = True
+    if encoding.get("dpi"):
+        options["dpi"] = encoding["dpi"]
+    tables = encoding.get("quantisation", ())
+    if not tables or any(len(t) != 64 for t in tables):
+        return options
+    luma = _writable(tables[0])
+    options.pop("quality", None)
+    if grey or len(tables) == 1:
+        options["qtables"] = [luma]
+        if not grey:
+            options["qtables"] = [luma, luma]
+        return options
+    if len(tables) == 4:  # inks: no table fits; the finest of them is at least as good
+        finest = _writable(np.min(tables, axis=0))
+        options["qtables"] = [finest, finest]
+        return options
+    if encoding.get("stored_rgb"):
+        finest = _writable(np.min(tables, axis=0))
+        options |= {"qtables": [finest, finest], "keep_rgb": True}
+        return options
+    options["qtables"] = [luma, _writable(np.min(tables[1:], axis=0))]
+    options["subsampling"] = _SUBSAMPLING.get(tuple(encoding.get("sampling", ())), 0)
+    return options
+
+
+_SUBSAMPLING: Final = {
+    ((2, 1), (1, 1), (1, 1)): 1,
+    ((2, 2), (1, 1), (1, 1)): 2,
+}
+"""Pillow's numbers for 4:2:2 and 4:2:0; everything else is written 4:4:4."""
+
+
+def _writable(table: Any) -> list[int]:
+    """Return a table that a baseline JPEG can hold."""
+    return [int(min(max(v, 1), 255)) for v in table]

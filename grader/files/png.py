@@ -1,0 +1,150 @@
+"""PNG files in and out: up to 8 bits through Pillow, 16 bits through imagecodecs (Pillow would cut them to 8)."""
+
+from __future__ import annotations
+
+import hashlib
+import io
+import struct
+from pathlib import Path
+from typing import Any, Final
+
+import imagecodecs
+import numpy as np
+from numpy.typing import NDArray
+from PIL import PngImagePlugin
+
+from grader.errors import DamagedFile, UnsupportedFile
+from grader.files import metadata, png_chunks, png_colour, raster
+from grader.files.png_chunks import GREY, GREY_ALPHA, PALETTE, RGBA
+from grader.model import Frame, Metadata, ReadLimits
+
+_COLOURS: Final = {GREY: 1, png_chunks.RGB: 3, PALETTE: 3, GREY_ALPHA: 1, RGBA: 3}
+_LEVEL: Final = 4
+
+
+def read(path: Path, limits: ReadLimits) -> Frame:
+    """Return the picture of a PNG file (of an animated one, the still picture).
+
+    Raises
+    ------
+    DamagedFile
+        A checksum is wrong, or the file ends early.
+    UnsupportedFile
+        It has one bit per pixel, is coded for HDR screens, or is too large.
+    """
+    data = path.read_bytes()
+    layout = png_chunks.parse(data)
+    raster.check_size(layout.width_px, layout.height_px, limits)
+    if layout.bits == 1 and layout.colour_type == GREY:
+        raise UnsupportedFile(
+            "it is black and white without greys (1 bit)", hint="nothing here can be graded"
+        )
+    image = PngImagePlugin.PngImageFile(io.BytesIO(data))
+    decoded = _decoded(data, image, layout)
+    decoded.facts, decoded.metadata = metadata.from_png_info(image.info, limits)
+    _add_colour(decoded, layout)
+    if b"acTL" in layout.chunks:
+        decoded.flag("page-chosen", "the file is animated; its still picture was taken")
+    for name in layout.bad:
+        decoded.notes.append(f"the {name} chunk is damaged and was left out")
+    return raster.frame(decoded, path, hashlib.sha256(data).hexdigest())
+
+
+def _decoded(data: bytes, image: Any, layout: png_chunks.Layout) -> raster.Decoded:
+    colours = _COLOURS[layout.colour_type]
+    kind: raster.Kind = "grey" if colours == 1 else "rgb"
+    encoding = {
+        "interlaced": layout.interlaced,
+        "pixels_per_metre": layout.chunks.get(b"pHYs"),
+        "colour_chunks": tuple((k, layout.chunks[k]) for k in png_colour.COLOUR_CHUNKS if k in layout.chunks),
+    }
+    if layout.colour_type == PALETTE:
+        samples, alpha = _palette(image, layout)
+        decoded = raster.Decoded(samples, kind, 8, "png", alpha=alpha, encoding=encoding)
+        decoded.flag("converted", "the palette was resolved: written as RGB")
+    else:
+        samples = _sixteen(data) if layout.bits == 16 else _eight(image)
+        samples = samples.reshape(layout.height_px, layout.width_px, -1)
+        alpha = samples[..., colours] if samples.shape[2] > colours else _keyed(samples, layout)
+        bits = max(layout.bits, 8)  # Pillow spreads 2 and 4 bits over 8
+        decoded = raster.Decoded(samples[..., :colours], kind, bits, "png", alpha=alpha, encoding=encoding)
+    if alpha is not None:
+        decoded.encoding["alpha"] = "straight"
+    return decoded
+
+
+def _eight(image: Any) -> NDArray[Any]:
+    image.load()
+    if image.mode not in ("L", "LA", "RGB", "RGBA"):
+        raise DamagedFile(f"the picture has an unexpected form ({image.mode})")
+    return np.asarray(image)
+
+
+def _sixteen(data: bytes) -> NDArray[np.uint16]:
+    samples = np.asarray(imagecodecs.png_decode(data))
+    if samples.dtype != np.uint16:
+        raise DamagedFile("the picture has another depth than its header claims")
+    return samples
+
+
+def _palette(image: Any, layout: png_chunks.Layout) -> tuple[NDArray[np.uint8], NDArray[np.uint8] | None]:
+    """Return the colours, and the alpha if any entry is transparent."""
+    image.load()
+    indices = np.asarray(image)
+    entries = layout.chunks[b"PLTE"]
+    colours = np.frombuffer(entries, np.uint8, len(entries) // 3 * 3).reshape(-1, 3)
+    if indices.max(initial=0) >= len(colours):
+        raise DamagedFile("its pixels point outside its palette")
+    transparency = layout.chunks.get(b"tRNS")
+    alpha = None
+    if transparency:
+        opacity = np.full(len(colours), 255, np.uint8)
+        given = np.frombuffer(transparency, np.uint8)[: len(colours)]
+        opacity[: len(given)] = given
+        alpha = opacity[indices]
+    return colours[indices], alpha
+
+
+def _keyed(samples: NDArray[Any], layout: png_chunks.Layout) -> NDArray[Any] | None:
+    """Return the alpha of a picture that names one colour as transparent (tRNS), else None."""
+    body = layout.chunks.get(b"tRNS")
+    channels = samples.shape[2]
+    if body is None or len(body) < 2 * channels:
+        return None
+    key = np.array(struct.unpack_from(f">{channels}H", body)) & (2**layout.bits - 1)
+    key = raster.scaled(key.astype(np.uint8 if layout.bits <= 8 else np.uint16), layout.bits)
+    top = np.iinfo(samples.dtype).max
+    return np.where((samples == key).all(axis=2), 0, top).astype(samples.dtype)
+
+
+def _add_colour(decoded: raster.Decoded, layout: png_chunks.Layout) -> None:
+    try:
+        decoded.icc = png_colour.icc(layout)
+    except (DamagedFile, png_chunks.zlib.error) as problem:
+        decoded.flag("profile-broken", f"the colour profile in the file cannot be used: {problem}")
+    decoded.space, notes = png_colour.space(layout)
+    decoded.notes += notes
+
+
+def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
+    """Return the frame as PNG: 8 bits where the frame has 8, else 16."""
+    pixels = frame.pixels if frame.pixels.dtype == np.uint8 else raster.to_sixteen_bits(frame.pixels)
+    channels = pixels[..., :1] if raster.is_grey(frame) else pixels
+    if frame.alpha is not None:
+        alpha = frame.alpha if frame.alpha.dtype == np.uint8 else raster.to_sixteen_bits(frame.alpha)
+        channels = np.concatenate([channels, alpha[..., None]], axis=2)
+    if channels.shape[2] == 1:
+        channels = channels[..., 0]
+    png = bytes(imagecodecs.png_encode(np.ascontiguousarray(channels), level=_LEVEL))
+    return png_chunks.insert(png, _chunks(frame, icc, carried))
+
+
+def _chunks(frame: Frame, icc: bytes | None, carried: Metadata) -> list[tuple[bytes, bytes]]:
+    chunks: list[tuple[bytes, bytes]] = []
+    if icc is not None:
+        chunks.append((b"iCCP", b"ICC profile\0\0" + png_chunks.zlib.compress(icc, 9)))
+    elif frame.encoding.get("untagged") == frame.space.name:
+        chunks += frame.encoding.get("colour_chunks", ())
+    if frame.encoding.get("pixels_per_metre"):
+        chunks.append((b"pHYs", frame.encoding["pixels_per_metre"]))
+    return chunks + metadata.png_chunks(carried)
