@@ -92,14 +92,14 @@ def from_tiff(
     return _gather(tree, packet.data if packet else None, iptc)
 
 
-def from_jpeg_info(info: Mapping[str, Any], limits: ReadLimits | None = None) -> tuple[Facts, Metadata]:
+def from_jpeg_info(info: Mapping[Any, Any], limits: ReadLimits | None = None) -> tuple[Facts, Metadata]:
     """Return what Pillow found in a JPEG's segments (`Image.info`: ``exif``, ``xmp``, ``photoshop``)."""
     resources = info.get("photoshop")
     iptc = resources.get(_IPTC_RESOURCE) if isinstance(resources, Mapping) else None
     return _from_blobs(info.get("exif"), info.get("xmp"), iptc, limits or ReadLimits())
 
 
-def from_png_info(info: Mapping[str, Any], limits: ReadLimits | None = None) -> tuple[Facts, Metadata]:
+def from_png_info(info: Mapping[Any, Any], limits: ReadLimits | None = None) -> tuple[Facts, Metadata]:
     """Return what Pillow found in a PNG's chunks (`Image.info`: eXIf, the XMP text, older "raw profile" texts)."""
     exif = info.get("exif") or _raw_profile(info, "exif") or _raw_profile(info, "APP1")
     packet = info.get("xmp") or info.get("XML:com.adobe.xmp")
@@ -202,7 +202,7 @@ def _resource(data: bytes) -> bytes | None:
     return None
 
 
-def _raw_profile(info: Mapping[str, Any], name: str) -> bytes | None:
+def _raw_profile(info: Mapping[Any, Any], name: str) -> bytes | None:
     """Return a profile that older PNG writers keep as hexadecimal text: a name, a length, the digits."""
     value = info.get(f"Raw profile type {name}")
     if isinstance(value, bytes):

@@ -54,8 +54,8 @@ def body_name(make: str, model: str, serial: str) -> str:
     >>> body_name("Lumo Works", "Lumo K2", "0042"), body_name("Lumo", "K2", "")
     ('Lumo K2 0042', 'Lumo K2')
     """
-    first = make.split(" ")[0].casefold()
-    if first and model.casefold().split(" ")[0] == first:
+    first = make.partition(" ")[0].casefold()
+    if first and model.partition(" ")[0].casefold() == first:
         make = ""
     return " ".join(part for part in (make, model, serial) if part)
 

@@ -61,7 +61,7 @@ _MAGICS: Final = (42, 43, 0x4F52, 0x5352, 0x0055)
 POINTERS: Final = (EXIF, GPS, INTEROP, SUB_IFDS)
 
 
-class BrokenStructure(Exception):  # noqa: N818 - never leaves this package
+class BrokenStructure(Exception):
     """The bytes are no TIFF structure, or not one that can be followed."""
 
 
@@ -76,7 +76,7 @@ class Field:
 
 @dataclass(frozen=True, slots=True)
 class Place:
-    """One tag as it stands in a directory: type, count, and where the value and the entry are. [bytes]"""
+    """One tag as it stands in a directory: type, count, and where in the file the value and the entry are."""
 
     type: int
     count: int
@@ -85,7 +85,7 @@ class Place:
 
     @property
     def size(self) -> int:
-        """Length of the value. [bytes]"""
+        """Length of the value, in bytes."""
         return SIZES.get(self.type, 0) * self.count
 
 
@@ -160,7 +160,7 @@ class Structure:
         if count > 65_535 or offset + head + count * entry > self.size:
             raise BrokenStructure("a directory does not fit in the file")
         body = self.read(offset + head, count * entry + struct.calcsize(link))
-        places = {}
+        places: Places = {}
         for i in range(count):
             tag, place = self._place(body[i * entry : (i + 1) * entry], offset + head + i * entry)
             places.setdefault(tag, place)
@@ -193,7 +193,7 @@ class Structure:
 
     def walk(self) -> Iterator[Places]:
         """Yield the directories of the chain and their sub-directories, each once; stop where one is broken."""
-        waiting, seen = [self.first], set()
+        waiting, seen = [self.first], set[int]()
         while waiting and len(seen) < MAX_DIRECTORIES:
             offset = waiting.pop(0)
             if offset == 0 or offset in seen:
@@ -227,11 +227,11 @@ def numbers(value: Field, order: str) -> list[float]:
 
 
 def text(value: Field | None) -> str:
-    """Return a text value up to its first NUL, with blanks and control characters tidied.
+    r"""Return a text value up to its first NUL, with blanks and control characters tidied.
 
     Examples
     --------
-    >>> text(Field(2, 8, b"  A\\tb \\0x"))
+    >>> text(Field(2, 8, b"  A\tb \0x"))
     'A b'
     """
     if value is None or value.type not in (1, 2, 7, 129):

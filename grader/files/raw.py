@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import hashlib
 import io
 from collections.abc import Iterator
 from contextlib import contextmanager
+from dataclasses import replace
 from os import PathLike, fspath
 from pathlib import Path
 from typing import Any, Final
@@ -17,7 +19,7 @@ from numpy.typing import NDArray
 
 from grader.colour.spaces import SPACES
 from grader.errors import DamagedFile, MissingFile, UnsupportedFile
-from grader.files import metadata
+from grader.files import metadata, raster_reduce
 from grader.files.raw_colour import (
     RawColour,
     colour_of,
@@ -29,7 +31,7 @@ from grader.files.raw_identify import is_dng, is_raw
 from grader.files.raw_reduce import reduce_mosaic
 from grader.model import Frame, Header, Metadata, ReadLimits
 
-__all__ = ["is_raw", "read", "read_reduced", "sensor_multipliers"]
+__all__ = ["is_dng", "is_raw", "read", "read_header", "read_reduced", "sensor_multipliers"]
 
 _DECODE: Final[dict[str, Any]] = {
     "gamma": (1, 1),
@@ -42,11 +44,14 @@ _DECODE: Final[dict[str, Any]] = {
 }
 _ORIENTATION: Final = {0: 1, 1: 2, 3: 3, 2: 4, 4: 5, 6: 6, 7: 7, 5: 8}
 """Exif orientation by LibRaw's flip (bits: 1 mirror columns, 2 mirror rows, 4 swap axes)."""
+_SIX_LEAST_PX: Final = 512
+"""LibRaw's own demosaicing of 6x6 filter arrays works in tiles of this size and refuses smaller pictures."""
 _TINY_PX: Final = 16
 _BLACK_LEVEL: Final = 0.002
 """A frame whose 99.9th percentile stays below this share of white is called all black. (judgement)"""
 _WHITE_SHARE: Final = 0.99
 """A frame of which this share is at white is called all white. (judgement)"""
+_TOP: Final = 65_535
 _RECOPY: Final = "copy it again from the card or the backup"
 
 
@@ -70,8 +75,20 @@ def read(path: str | PathLike[str], limits: ReadLimits | None = None) -> Frame:
     """
     bounds = limits or ReadLimits()
     with _opened(path, bounds) as raw:
-        colour = _colour(raw, path)
-        return _frame(raw, path, colour, _decoded(raw, colour), bounds)
+        header, blobs, colour = _header(raw, path, bounds)
+        return _frame(header, blobs, _decoded(raw, colour))
+
+
+def read_header(path: str | PathLike[str], limits: ReadLimits | None = None) -> Header:
+    """Return a raw file's header without developing its picture.
+
+    Raises
+    ------
+    MissingFile, UnsupportedFile, DamagedFile
+    """
+    bounds = limits or ReadLimits()
+    with _opened(path, bounds) as raw:
+        return _header(raw, path, bounds)[0]
 
 
 def read_reduced(path: str | PathLike[str], limits: ReadLimits | None = None, target_px: int = 600) -> Frame:
@@ -92,11 +109,11 @@ def read_reduced(path: str | PathLike[str], limits: ReadLimits | None = None, ta
     """
     bounds = limits or ReadLimits()
     with _opened(path, bounds) as raw:
-        colour = _colour(raw, path)
+        header, blobs, colour = _header(raw, path, bounds)
         pixels = reduce_mosaic(raw, colour, target_px)
-        if pixels is None:
-            pixels = _decoded(raw, colour, half_size=True)
-        return _frame(raw, path, colour, pixels, bounds)
+        if pixels is not None:
+            return _frame(header, blobs, pixels)
+        return raster_reduce.reduced(_frame(header, blobs, _decoded(raw, colour, half_size=True)), target_px)
 
 
 @contextmanager
@@ -136,9 +153,19 @@ def _opened(path: str | PathLike[str], limits: ReadLimits) -> Iterator[Any]:
         TypeError,
         ValueError,
     ) as problem:
-        raise DamagedFile(f"the raw file cannot be decoded ({problem})", path=path, hint=_RECOPY) from problem
+        raise DamagedFile(
+            f"the raw file cannot be decoded ({_words(problem)})", path=path, hint=_RECOPY
+        ) from problem
     finally:
         raw.close()
+
+
+def _words(problem: BaseException) -> str:
+    """Return what LibRaw says (it says it in bytes), or the exception's name."""
+    said = problem.args[0] if problem.args else ""
+    return (
+        said.decode("utf-8", "replace") if isinstance(said, bytes) else str(problem) or type(problem).__name__
+    )
 
 
 def _open(raw: Any, path: str | PathLike[str]) -> None:
@@ -149,27 +176,39 @@ def _open(raw: Any, path: str | PathLike[str]) -> None:
             raw.open_buffer(stream)
 
 
-def _colour(raw: Any, path: str | PathLike[str]) -> RawColour:
-    return colour_of(raw, dng=is_dng(path))
-
-
 def _decoded(raw: Any, colour: RawColour, *, half_size: bool = False) -> NDArray[np.uint16]:
-    """Return LibRaw's decode (H, W, 3); a copy, because LibRaw's memory goes when the file is closed."""
-    balance = {"user_wb": [float(m) for m in colour.balance]}
-    if raw.raw_type == rawpy.RawType.Stack and colour.as_shot_usable:
+    """Return LibRaw's decode (H, W, 3); a sensor without colour gives three equal channels."""
+    balance: dict[str, Any] = {"user_wb": [float(m) for m in colour.balance]}
+    stacked = raw.raw_type == rawpy.RawType.Stack
+    if stacked and colour.as_shot_usable:
         balance = {"use_camera_wb": True}  # some of these have their balance applied already; LibRaw knows
-    pixels = raw.postprocess(half_size=half_size, **balance, **_DECODE)
-    if pixels.ndim == 2:
-        pixels = pixels[..., None]
-    return np.array(np.broadcast_to(pixels[..., :3], (*pixels.shape[:2], 3)))
-
-
-def _frame(
-    raw: Any, path: str | PathLike[str], colour: RawColour, pixels: NDArray[np.uint16], limits: ReadLimits
-) -> Frame:
-    facts, blobs = _facts(raw, path, limits)
-    flags, notes = _judged(raw, colour, pixels)
     sizes = raw.sizes
+    if (
+        raw.raw_pattern is not None
+        and len(raw.raw_pattern) == 6
+        and min(sizes.width, sizes.height) < _SIX_LEAST_PX
+    ):
+        balance["demosaic_algorithm"] = rawpy.DemosaicAlgorithm.LINEAR
+    black = raw.black_level_per_channel
+    if stacked and black[3] < min(black[:3]):  # LibRaw forgets black when it scales demosaiced kinds
+        balance["user_sat"] = max(raw.white_level - min(black[:3]), 1)
+    pixels = raw.postprocess(half_size=half_size, **balance, **_DECODE)
+    if pixels.ndim == 2 or pixels.shape[2] == 1:
+        pixels = np.repeat(pixels.reshape(*pixels.shape[:2], 1), 3, axis=2)
+    return np.ascontiguousarray(pixels[..., :3])
+
+
+def _header(raw: Any, path: str | PathLike[str], limits: ReadLimits) -> tuple[Header, Metadata, RawColour]:
+    colour = colour_of(raw, dng=is_dng(path))
+    facts, blobs = _facts(raw, path, limits)
+    flags, notes = _judged_colour(raw, colour)
+    sizes = raw.sizes
+    if min(sizes.width, sizes.height) < _TINY_PX:
+        flags.append("few-usable-pixels")
+        notes.append(f"the picture is tiny ({sizes.width} x {sizes.height} pixels)")
+    with Path(path).open("rb") as stream:
+        digest = hashlib.file_digest(stream, "sha256").hexdigest()
+    facts |= {"orientation": _ORIENTATION.get(sizes.flip, 1), "notes": (*facts.get("notes", ()), *notes)}
     header = Header(
         file=fspath(path),
         format="raw",
@@ -178,10 +217,39 @@ def _frame(
         referred="scene",
         daylight_from_decoded=daylight_from_decoded(colour),
         sensor=sensor_of(colour),
-        flags=flags,
-        notes=(*facts.pop("notes", ()), *notes),
-        **{**facts, "orientation": _ORIENTATION.get(sizes.flip, 1)},
+        sha256=digest,
+        flags=tuple(flags),
+        **facts,
     )
+    return header, blobs, colour
+
+
+def _judged_colour(raw: Any, colour: RawColour) -> tuple[list[str], list[str]]:
+    """Return the flags and notes that the balance and the matrix give rise to."""
+    flags, notes = [], []
+    if colour.colours == 1:
+        notes.append("the sensor sees no colour; the picture is grey")
+    elif colour.working_from_balanced is None:
+        flags.append("matrix-missing")
+        notes.append("this camera's colour matrix is not known; sensor colours were taken as they are")
+    if not colour.as_shot_usable:
+        flags.append("balance-unusable")
+        given = ", ".join(f"{m:.4g}" for m in raw.camera_whitebalance[:3])
+        notes.append(f"the as-shot balance ({given}) is missing or nonsense; the daylight setting was taken")
+    return flags, notes
+
+
+def _frame(header: Header, blobs: Metadata, pixels: NDArray[np.uint16]) -> Frame:
+    """Return the frame, flagged where the decode is all black or all white."""
+    small = pixels[:: max(pixels.shape[0] // 400, 1), :: max(pixels.shape[1] // 400, 1)]
+    found = []
+    if np.percentile(small.max(axis=2), 99.9) <= _BLACK_LEVEL * _TOP:
+        found.append(("dark", "the decode is all black"))
+    if np.mean(small.min(axis=2) >= _TOP) >= _WHITE_SHARE:
+        found.append(("clipped", "the decode is all white"))
+    if found:
+        flags, notes = zip(*found, strict=True)
+        header = replace(header, flags=(*header.flags, *flags), notes=(*header.notes, *notes))
     return Frame(pixels, SPACES["linear Rec.2020"], header, blobs)
 
 
@@ -223,32 +291,3 @@ def _libraw_facts(raw: Any) -> metadata.Facts:
         if np.isfinite(value) and 0 < value < 1e7:
             facts[name] = float(value)
     return facts
-
-
-def _judged(
-    raw: Any, colour: RawColour, pixels: NDArray[np.uint16]
-) -> tuple[tuple[str, ...], tuple[str, ...]]:
-    """Return the flags and notes that decoding gives rise to."""
-    flags, notes = [], []
-    if colour.colours == 1:
-        notes.append("the sensor sees no colour; the picture is grey")
-    elif colour.working_from_balanced is None:
-        flags.append("matrix-missing")
-        notes.append(
-            "neither the file nor LibRaw gives this camera's colour matrix; sensor colours were taken as they are"
-        )
-    if not colour.as_shot_usable:
-        flags.append("balance-unusable")
-        given = ", ".join(f"{m:.4g}" for m in raw.camera_whitebalance[:3])
-        notes.append(f"the as-shot balance ({given}) is missing or nonsense; the daylight setting was taken")
-    small = pixels[:: max(pixels.shape[0] // 500, 1), :: max(pixels.shape[1] // 500, 1)]
-    if np.percentile(small.max(axis=2), 99.9) <= _BLACK_LEVEL * 65_535:
-        flags.append("dark")
-        notes.append("the decode is all black")
-    if np.mean(small.min(axis=2) >= 65_535) >= _WHITE_SHARE:
-        flags.append("clipped")
-        notes.append("the decode is all white")
-    if min(raw.sizes.width, raw.sizes.height) < _TINY_PX:
-        flags.append("few-usable-pixels")
-        notes.append(f"the decode is tiny ({raw.sizes.width} x {raw.sizes.height} pixels)")
-    return tuple(flags), tuple(notes)

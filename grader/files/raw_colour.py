@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.colour.spaces import SPACES
+from grader.colour.white import linear_from_xy
 from grader.model import Header, Matrix, Sensor
 
 _XYZ_FROM_SRGB: Final[Matrix] = np.array(
@@ -87,7 +88,6 @@ def _matrix(raw: Any, colours: int, dng: bool) -> tuple[Matrix | None, NDArray[n
 def _four(values: Any, colours: int) -> NDArray[np.float64] | None:
     """Return four multipliers, green = 1; None where one that is needed is missing or no number above zero."""
     four = np.asarray(values, np.float64)
-    four = np.resize(four, 4) if four.size == 4 else np.append(four, np.zeros(4 - four.size))
     if colours == 1:
         return np.ones(4)
     with np.errstate(invalid="ignore"):
@@ -96,7 +96,7 @@ def _four(values: Any, colours: int) -> NDArray[np.float64] | None:
         return None
     if not sound[3]:
         four[3] = four[1]
-    return four / four[1]
+    return np.asarray(four / four[1])
 
 
 def _plausible(ratio: NDArray[np.float64], far: float, colours: int) -> bool:
@@ -124,7 +124,7 @@ def sensor_of(colour: RawColour) -> Sensor | None:
     if colour.working_from_balanced is None or colour.colours != 3:
         return None
     return Sensor(
-        sensor_from_rec2020=np.linalg.inv(colour.working_from_balanced[:, :3]),
+        sensor_from_rec2020=np.asarray(np.linalg.inv(colour.working_from_balanced[:, :3]), np.float64),
         daylight_neutral=1 / colour.daylight[:3],
         as_shot_neutral=1 / colour.as_shot[:3],
     )
@@ -132,8 +132,6 @@ def sensor_of(colour: RawColour) -> Sensor | None:
 
 def neutral_under(sensor: Sensor, light_xy: tuple[float, float]) -> NDArray[np.float64]:
     """Return the sensor's response (3,) to a neutral under a light, green = 1; at least 1e-3 in each channel."""
-    from grader.colour.white import linear_from_xy
-
     balanced = sensor.sensor_from_rec2020 @ linear_from_xy(light_xy)
     response = np.maximum(balanced * sensor.daylight_neutral, 1e-3 * np.max(balanced))
     return np.asarray(response / response[1])

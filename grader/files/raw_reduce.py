@@ -42,57 +42,52 @@ def reduce_mosaic(raw: Any, colour: RawColour, target_px: int) -> NDArray[np.uin
     cell = max(max(mosaic.shape) // (period * target_px), 1) * period
     if set(range(colour.colours)) - set(np.unique(pattern)) or min(mosaic.shape) < cell:
         return None
-    black = np.asarray(raw.black_level_per_channel, np.float64)
-    span = float(raw.white_level) - black.min()
+    black = np.asarray(raw.black_level_per_channel, np.int64)
+    span = int(raw.white_level) - int(black.min())
     if span <= 0:
         return None
-    gain = colour.balance / colour.balance[: max(colour.colours, 3)].min() / span
-    sums, counts = _average(mosaic, pattern.astype(np.int64), black, gain, _SATURATED * span, cell)
-    return _to_working(sums, counts, colour)
-
-
-def _to_working(
-    sums: NDArray[np.float64], counts: NDArray[np.float64], colour: RawColour
-) -> NDArray[np.uint16]:
+    gain = colour.balance / colour.balance[: max(colour.colours, 3)].min()  # LibRaw's: the least is 1
+    top = np.minimum(black + np.rint(span / gain), _TOP).astype(np.int64)
+    saturated = (black + _SATURATED * span).astype(np.int64)
+    sums, counts, used = _average(mosaic, pattern.astype(np.int64), black, top, saturated, cell)
     if colour.colours == 3:  # the second green joins the first
         sums[..., 1] += sums[..., 3]
-        counts[..., 1] += counts[..., 3]
-    mean = (sums / np.maximum(counts[..., :4], 1))[..., : colour.colours]
-    assert colour.working_from_balanced is not None
-    working = np.einsum("yxc,dc->yxd", mean, colour.working_from_balanced)
-    working[counts[..., 4] > _CLIPPED_SHARE] = 1.0
-    return np.rint(np.clip(working, 0, 1) * _TOP).astype(np.uint16)
+        counts[1] += counts[3]
+    n = colour.colours
+    with np.errstate(invalid="ignore"):
+        mean = sums[..., :n] * (gain[:n] / span) / (counts[:n] * used[..., None])
+        working = np.einsum("yxc,dc->yxd", mean, colour.working_from_balanced)
+    working[used < (1 - _CLIPPED_SHARE) * (cell // period) ** 2] = 1.0
+    return np.asarray(np.rint(np.clip(working, 0, 1) * _TOP), np.uint16)
 
 
 @jit
-def _average(mosaic, pattern, black, gain, saturated, cell):  # type: ignore[no-untyped-def]
-    """Return sums (h, w, 4) by colour of the balanced values and counts (h, w, 5): by colour, and the clipped share.
+def _average(mosaic, pattern, black, top, saturated, cell):  # type: ignore[no-untyped-def]  # noqa: C901 - one loop
+    """Average the whole periods of the filter array in each cell, leaving out those with a clipped photosite.
 
-    A period of the filter array with a clipped photosite is left out, unless all are: then all are taken.
+    Returns sums (h, w, 4) above black by colour, how often each colour stands in a period (4,), and how many
+    periods each cell used (h, w).
     """
     period = pattern.shape[0]
     h, w = mosaic.shape[0] // cell, mosaic.shape[1] // cell
-    sums, counts = np.zeros((h, w, 4)), np.zeros((h, w, 5))
-    per_cell = (cell // period) ** 2
+    sums, used = np.zeros((h, w, 4)), np.zeros((h, w), np.int64)
     for cy in range(h):
         for cx in range(w):
-            clipped = 0
-            for y0 in range(cy * cell, (cy + 1) * cell, period):
-                for x0 in range(cx * cell, (cx + 1) * cell, period):
+            for y in range(cy * cell, (cy + 1) * cell, period):
+                for x in range(cx * cell, (cx + 1) * cell, period):
                     over = False
                     for dy in range(period):
                         for dx in range(period):
-                            c = pattern[dy, dx]
-                            if mosaic[y0 + dy, x0 + dx] - black[c] >= saturated:
-                                over = True
+                            over |= mosaic[y + dy, x + dx] >= saturated[pattern[dy, dx]]
                     if over:
-                        clipped += 1
                         continue
+                    used[cy, cx] += 1
                     for dy in range(period):
                         for dx in range(period):
                             c = pattern[dy, dx]
-                            value = max(mosaic[y0 + dy, x0 + dx] - black[c], 0.0) * gain[c]
-                            sums[cy, cx, c] += min(value, 1.0)
-                            counts[cy, cx, c] += 1
-            counts[cy, cx, 4] = clipped / per_cell
-    return sums, counts
+                            value = np.int64(mosaic[y + dy, x + dx])
+                            sums[cy, cx, c] += min(max(value, black[c]), top[c]) - black[c]
+    counts = np.zeros(4, np.int64)
+    for c in pattern.ravel():
+        counts[c] += 1
+    return sums, counts, used

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import xml.dom.minidom
 from collections.abc import Iterator, Mapping
-from typing import Final
+from typing import Any, Final
 from xml.parsers import expat
 
 RDF: Final = "http://www.w3.org/1999/02/22-rdf-syntax-ns#"
@@ -37,10 +37,10 @@ _COORDINATES: Final = {"latitude", "longitude", "altitude", "absolutealtitude"}
 _IN_TEXT: Final = str.maketrans({"&": "&amp;", "<": "&lt;", ">": "&gt;", "\r": "&#13;"})
 _IN_ATTRIBUTE: Final = _IN_TEXT | str.maketrans({'"': "&quot;", "\n": "&#10;", "\t": "&#9;"})
 
-_Node = xml.dom.minidom.Element
+_Node = Any  # minidom's classes, whose types are looser than their use
 
 
-class BrokenPacket(Exception):  # noqa: N818 - never leaves this package
+class BrokenPacket(Exception):
     """The packet is no sound XML, or asks for what is not allowed."""
 
 
@@ -62,7 +62,7 @@ class Packet:
         text = _EMPTY.encode() if data is None else data.strip(b"\0 \t\r\n")
         _check(text)
         try:
-            self._document = xml.dom.minidom.parseString(text)
+            self._document = xml.dom.minidom.parseString(text)  # noqa: S318 - checked above
         except (expat.ExpatError, ValueError, RecursionError, LookupError) as problem:
             raise BrokenPacket(str(problem)) from None
         found = self._document.getElementsByTagNameNS(RDF, "RDF")
@@ -119,7 +119,7 @@ class Packet:
 
     def to_bytes(self) -> bytes:
         """Return the packet with its wrapper, in UTF-8."""
-        root = self._document.documentElement
+        root: _Node = self._document.documentElement
         body = _markup(root)
         if (root.namespaceURI, root.localName) != (META, "xmpmeta"):
             body = f'<x:xmpmeta xmlns:x="{META}">{body}</x:xmpmeta>'
@@ -171,7 +171,7 @@ def _check(data: bytes) -> None:
 
 
 def _markup(node: _Node) -> str:
-    """Return a node as XML.  (minidom's own writer of Python 3.11 loses line ends inside attributes.)"""
+    """Return a node as XML; minidom's own writer loses line ends inside attributes (Python 3.11)."""
     if node.nodeType in (node.TEXT_NODE, node.CDATA_SECTION_NODE):
         return str(node.data).translate(_IN_TEXT)
     if node.nodeType != node.ELEMENT_NODE:
