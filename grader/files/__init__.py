@@ -21,8 +21,10 @@ pixels_per_metre  PNG: the pHYs chunk;  interlaced (bool), colour_chunks ((type,
 ================  ==================================================================================
 """
 
+from grader.files.dng import rewrite_raw
 from grader.files.profile_build import profile_bytes
+from grader.files.raw import sensor_multipliers
 from grader.files.reading import kind_of, read, read_reduced
 from grader.files.writing import suffix_for, write
 
-__all__ = ["kind_of", "profile_bytes", "read", "read_reduced", "suffix_for", "write"]
+__all__ = ["kind_of", "profile_bytes", "read", "read_reduced", "rewrite_raw", "sensor_multipliers", "suffix_for", "write"]
