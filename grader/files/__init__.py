@@ -27,4 +27,13 @@ from grader.files.raw import sensor_multipliers
 from grader.files.reading import kind_of, read, read_reduced
 from grader.files.writing import suffix_for, write
 
-__all__ = ["kind_of", "profile_bytes", "read", "read_reduced", "rewrite_raw", "sensor_multipliers", "suffix_for", "write"]
+__all__ = [
+    "kind_of",
+    "profile_bytes",
+    "read",
+    "read_reduced",
+    "rewrite_raw",
+    "sensor_multipliers",
+    "suffix_for",
+    "write",
+]

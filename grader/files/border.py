@@ -18,6 +18,11 @@ from typing import Final
 
 from grader.errors import DamagedFile, GraderError, MissingFile, UnsupportedFile, WriteFailed
 
+CONVERT_HINT: Final = "convert it to a 16-bit RGB TIFF first"
+"""What to do with a sound file of a kind that grader does not grade."""
+RECOPY_HINT: Final = "copy it again from the card or the backup"
+"""What to do with a damaged file."""
+
 _CANNOT_OPEN: Final[dict[int, tuple[str, str]]] = {
     errno.ENOENT: ("there is no such file", "check the path"),
     errno.ENOTDIR: ("there is no such file", "check the path"),
@@ -64,7 +69,6 @@ _DAMAGED: Final = (
 )
 """What tifffile, imagecodecs (whose errors are RuntimeErrors), Pillow and zlib raise on damaged files."""
 
-_DAMAGE_HINT: Final = "copy it again from the card or the backup"
 
 for _name in ("tifffile", "PIL"):  # their complaints about a file reach the user as one sentence of ours
     logging.getLogger(_name).addHandler(logging.NullHandler())
@@ -96,11 +100,7 @@ def reading(path: str | PathLike[str]) -> Iterator[None]:
         raise _unreadable(problem, path) from problem
     except _DAMAGED as problem:
         message = f"the picture cannot be decoded ({_words(problem)})"
-        raise DamagedFile(message, path=path, hint=_DAMAGE_HINT) from problem
-
-
-CONVERT_HINT: Final = "convert it to a 16-bit RGB TIFF first"
-"""What to do with a sound file of a kind that grader does not grade."""
+        raise DamagedFile(message, path=path, hint=RECOPY_HINT) from problem
 
 
 def _unreadable(problem: OSError, path: str | PathLike[str]) -> GraderError:
@@ -108,7 +108,7 @@ def _unreadable(problem: OSError, path: str | PathLike[str]) -> GraderError:
         message, hint = _CANNOT_OPEN[problem.errno]
         return MissingFile(message, path=path, hint=hint)
     message = f"the picture cannot be decoded ({_words(problem)})"  # Pillow raises OSError for damage
-    return DamagedFile(message, path=path, hint=_DAMAGE_HINT)
+    return DamagedFile(message, path=path, hint=RECOPY_HINT)
 
 
 @contextmanager

@@ -10,8 +10,15 @@ from typing import Any, Final
 import numpy as np
 from PIL import Image, JpegImagePlugin
 
-from grader.errors import DamagedFile
-from grader.files import jpeg_markers, metadata, raster
+from grader.files import (
+    jpeg_entropy,
+    jpeg_markers,
+    metadata,
+    raster,
+    raster_colour,
+    raster_depth,
+    raster_frame,
+)
 from grader.model import Frame, Metadata, ReadLimits
 
 _KINDS: Final[dict[str, raster.Kind]] = {"L": "grey", "RGB": "rgb", "CMYK": "cmyk"}
@@ -30,20 +37,26 @@ def read(path: Path, limits: ReadLimits) -> Frame:
     """
     data = path.read_bytes()
     layout = jpeg_markers.parse(data)
+    jpeg_markers.check_supported(layout)
     raster.check_size(layout.width_px, layout.height_px, limits)
+    jpeg_entropy.check(data, layout)
     if not layout.ended:
-        raise DamagedFile(
-            "the file ends before the picture does", hint="copy it again from the card or the backup"
-        )
-    image = JpegImagePlugin.JpegImageFile(io.BytesIO(data))
+        data += b"\xff\xd9"
+    image: Any = JpegImagePlugin.JpegImageFile(io.BytesIO(data))
     decoded = _decoded(image, layout)
     decoded.facts, decoded.metadata = metadata.from_jpeg_info(image.info, limits)
-    decoded.space = raster.space_by_exif(decoded.metadata)
+    decoded.space = raster_colour.space_by_exif(decoded.metadata)
     if "mp" in image.info:
         decoded.flag(
             "page-chosen", "the file holds further pictures (views or a gain map); the first was taken"
         )
-    return raster.frame(decoded, path, hashlib.sha256(data).hexdigest())
+    if not layout.ended:
+        decoded.notes.append("the end marker is missing; the picture itself is whole")
+    if image.info.get("icc_profile", b"") is None:
+        decoded.flag(
+            "profile-broken", "the colour profile in the file cannot be used: a part of it is missing"
+        )
+    return raster_frame.frame_from_decoded(decoded, path, hashlib.sha256(data).hexdigest())
 
 
 def _decoded(image: Any, layout: jpeg_markers.Layout) -> raster.Decoded:
@@ -62,13 +75,14 @@ def _encoding(image: Any, layout: jpeg_markers.Layout) -> dict[str, Any]:
         "sampling": tuple((c.horizontal, c.vertical) for c in layout.components),
         "progressive": layout.progressive,
         "stored_rgb": image.info.get("adobe_transform") == 0 and len(layout.components) == 3,
+        "comment": image.info.get("comment"),
         "dpi": image.info.get("dpi") if image.info.get("jfif_unit") else None,
     }
 
 
 def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
     """Return the frame as JPEG: the source's quantisation and sampling, or better; else quality 95 and 4:4:4."""
-    pixels = raster.to_eight_bits(frame.pixels)
+    pixels = raster_depth.to_eight_bits(frame.pixels)
     if raster.is_grey(frame):
         pixels = np.ascontiguousarray(pixels[..., 0])
     buffer = io.BytesIO()
@@ -88,11 +102,12 @@ def _as_source(frame: Frame, *, grey: bool) -> dict[str, Any]:
         options["progressive"] = True
     if encoding.get("dpi"):
         options["dpi"] = encoding["dpi"]
+    if encoding.get("comment"):
+        options["comment"] = encoding["comment"]
     tables = encoding.get("quantisation", ())
     if not tables or any(len(t) != 64 for t in tables):
         return options
     luma = _writable(tables[0])
-    options.pop("quality", None)
     if grey or len(tables) == 1:
         options["qtables"] = [luma]
         if not grey:

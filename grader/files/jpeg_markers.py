@@ -60,6 +60,8 @@ class Layout:
     height_px: int = 0
     components: list[Component] = field(default_factory=list)
     scans: list[Scan] = field(default_factory=list)
+    quantisation: dict[int, int] = field(default_factory=dict)
+    """The DC step of each quantisation table."""
     restart_interval: int = 0
     ended: bool = False
     end: int = 0
@@ -75,19 +77,55 @@ class Layout:
         return self.process in (0xC9, 0xCA)
 
 
-def parse(data: bytes, *, start: int = 0) -> Layout:
-    """Return the structure of the JPEG picture that begins at ``start``.
+def parse(data: bytes, tables: bytes = b"") -> Layout:
+    """Return the structure of a JPEG picture.
+
+    Parameters
+    ----------
+    data : bytes
+        From its first marker to its last, or further.
+    tables : bytes
+        A JPEG stream of tables only, which goes before (the JPEGTables of a TIFF).
 
     Raises
     ------
     DamagedFile
         A segment is cut short or missing.
-    UnsupportedFile
-        The coding process is one that is not decoded.
     """
     layout = Layout()
     huffman: dict[int, bytes] = {}
-    position = start + 2
+    if tables:
+        _walk(tables, layout, huffman)
+    _walk(data, layout, huffman)
+    if layout.process < 0 or not layout.scans:
+        raise DamagedFile("the file ends before the picture begins")
+    if any(not (1 <= c.horizontal <= 4 and 1 <= c.vertical <= 4) for c in layout.components):
+        raise DamagedFile("its frame header has impossible sampling factors")
+    return layout
+
+
+def check_supported(layout: Layout) -> None:
+    """Refuse what cannot be decoded.
+
+    Raises
+    ------
+    UnsupportedFile
+        It is coded in a way that is not supported.
+    """
+    count = len(layout.components)
+    if layout.process in _REFUSED:
+        raise UnsupportedFile(f"{_REFUSED[layout.process]} is not supported", hint=CONVERT_HINT)
+    if layout.bits != 8:
+        raise UnsupportedFile(f"{layout.bits}-bit JPEG is not supported", hint=CONVERT_HINT)
+    if count not in (1, 3, 4):
+        raise UnsupportedFile(f"a JPEG with {count} components is not supported", hint=CONVERT_HINT)
+    if layout.height_px == 0:
+        raise UnsupportedFile("a JPEG that tells its height at the end is not supported", hint=CONVERT_HINT)
+
+
+def _walk(data: bytes, layout: Layout, huffman: dict[int, bytes]) -> None:
+    """Walk over all markers up to the end of the picture."""
+    position = 2
     while True:
         position, marker = _next_marker(data, position)
         if marker in (EOI, -1):
@@ -100,6 +138,8 @@ def parse(data: bytes, *, start: int = 0) -> Layout:
             _read_frame(layout, marker, body)
         elif marker == DHT:
             huffman |= _tables(body)
+        elif marker == DQT:
+            layout.quantisation |= _dc_steps(body)
         elif marker == DRI and len(body) >= 2:
             layout.restart_interval = struct.unpack_from(">H", body)[0]
         elif marker == SOS:
@@ -107,9 +147,6 @@ def parse(data: bytes, *, start: int = 0) -> Layout:
             layout.scans.append(Scan(body, position, end, dict(huffman), layout.restart_interval))
             position = end
     layout.end = position
-    if layout.process < 0 or not layout.scans:
-        raise DamagedFile("the file ends before the picture begins")
-    return layout
 
 
 def _next_marker(data: bytes, position: int) -> tuple[int, int]:
@@ -134,8 +171,6 @@ def _segment(data: bytes, position: int) -> tuple[bytes, int]:
 
 
 def _read_frame(layout: Layout, marker: int, body: bytes) -> None:
-    if marker in _REFUSED:
-        raise UnsupportedFile(f"{_REFUSED[marker]} is not supported", hint=CONVERT_HINT)
     if layout.process >= 0:
         raise DamagedFile("it has two frame headers")
     if len(body) < 6 or len(body) < 6 + 3 * body[5]:
@@ -145,14 +180,6 @@ def _read_frame(layout: Layout, marker: int, body: bytes) -> None:
     for index in range(count):
         identity, sampling, table = body[6 + 3 * index : 9 + 3 * index]
         layout.components.append(Component(identity, sampling >> 4, sampling & 15, table))
-    if layout.bits != 8:
-        raise UnsupportedFile(f"{layout.bits}-bit JPEG is not supported", hint=CONVERT_HINT)
-    if count not in (1, 3, 4):
-        raise UnsupportedFile(f"a JPEG with {count} components is not supported", hint=CONVERT_HINT)
-    if layout.height_px == 0:
-        raise UnsupportedFile("a JPEG that tells its height at the end is not supported", hint=CONVERT_HINT)
-    if any(not (1 <= c.horizontal <= 4 and 1 <= c.vertical <= 4) for c in layout.components):
-        raise DamagedFile("its frame header has impossible sampling factors")
 
 
 def _tables(body: bytes) -> dict[int, bytes]:
@@ -164,6 +191,19 @@ def _tables(body: bytes) -> dict[int, bytes]:
             raise DamagedFile("one of its Huffman tables is cut short")
         found[body[position]] = body[position + 1 : position + 17 + size]
         position += 17 + size
+    return found
+
+
+def _dc_steps(body: bytes) -> dict[int, int]:
+    """Return the first value of each quantisation table, by place."""
+    found, position = {}, 0
+    while position < len(body):
+        wide = body[position] >> 4
+        size = 65 + 64 * bool(wide)
+        if position + size > len(body):
+            raise DamagedFile("one of its quantisation tables is cut short")
+        found[body[position] & 15] = int.from_bytes(body[position + 1 : position + 2 + bool(wide)], "big")
+        position += size
     return found
 
 

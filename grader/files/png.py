@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import io
 import struct
+import zlib
 from pathlib import Path
 from typing import Any, Final
 
@@ -14,7 +15,7 @@ from numpy.typing import NDArray
 from PIL import PngImagePlugin
 
 from grader.errors import DamagedFile, UnsupportedFile
-from grader.files import metadata, png_chunks, png_colour, raster
+from grader.files import metadata, png_chunks, png_colour, raster, raster_depth, raster_frame
 from grader.files.png_chunks import GREY, GREY_ALPHA, PALETTE, RGBA
 from grader.model import Frame, Metadata, ReadLimits
 
@@ -39,7 +40,7 @@ def read(path: Path, limits: ReadLimits) -> Frame:
         raise UnsupportedFile(
             "it is black and white without greys (1 bit)", hint="nothing here can be graded"
         )
-    image = PngImagePlugin.PngImageFile(io.BytesIO(data))
+    image: Any = PngImagePlugin.PngImageFile(io.BytesIO(data))
     decoded = _decoded(data, image, layout)
     decoded.facts, decoded.metadata = metadata.from_png_info(image.info, limits)
     _add_colour(decoded, layout)
@@ -47,7 +48,7 @@ def read(path: Path, limits: ReadLimits) -> Frame:
         decoded.flag("page-chosen", "the file is animated; its still picture was taken")
     for name in layout.bad:
         decoded.notes.append(f"the {name} chunk is damaged and was left out")
-    return raster.frame(decoded, path, hashlib.sha256(data).hexdigest())
+    return raster_frame.frame_from_decoded(decoded, path, hashlib.sha256(data).hexdigest())
 
 
 def _decoded(data: bytes, image: Any, layout: png_chunks.Layout) -> raster.Decoded:
@@ -59,8 +60,8 @@ def _decoded(data: bytes, image: Any, layout: png_chunks.Layout) -> raster.Decod
         "colour_chunks": tuple((k, layout.chunks[k]) for k in png_colour.COLOUR_CHUNKS if k in layout.chunks),
     }
     if layout.colour_type == PALETTE:
-        samples, alpha = _palette(image, layout)
-        decoded = raster.Decoded(samples, kind, 8, "png", alpha=alpha, encoding=encoding)
+        colour, alpha = _palette(image, layout)
+        decoded = raster.Decoded(colour, kind, 8, "png", alpha=alpha, encoding=encoding)
         decoded.flag("converted", "the palette was resolved: written as RGB")
     else:
         samples = _sixteen(data) if layout.bits == 16 else _eight(image)
@@ -87,7 +88,7 @@ def _sixteen(data: bytes) -> NDArray[np.uint16]:
     return samples
 
 
-def _palette(image: Any, layout: png_chunks.Layout) -> tuple[NDArray[np.uint8], NDArray[np.uint8] | None]:
+def _palette(image: Any, layout: png_chunks.Layout) -> tuple[NDArray[Any], NDArray[Any] | None]:
     """Return the colours, and the alpha if any entry is transparent."""
     image.load()
     indices = np.asarray(image)
@@ -112,7 +113,7 @@ def _keyed(samples: NDArray[Any], layout: png_chunks.Layout) -> NDArray[Any] | N
     if body is None or len(body) < 2 * channels:
         return None
     key = np.array(struct.unpack_from(f">{channels}H", body)) & (2**layout.bits - 1)
-    key = raster.scaled(key.astype(np.uint8 if layout.bits <= 8 else np.uint16), layout.bits)
+    key = raster_depth.scaled(key.astype(np.uint8 if layout.bits <= 8 else np.uint16), layout.bits)
     top = np.iinfo(samples.dtype).max
     return np.where((samples == key).all(axis=2), 0, top).astype(samples.dtype)
 
@@ -120,7 +121,7 @@ def _keyed(samples: NDArray[Any], layout: png_chunks.Layout) -> NDArray[Any] | N
 def _add_colour(decoded: raster.Decoded, layout: png_chunks.Layout) -> None:
     try:
         decoded.icc = png_colour.icc(layout)
-    except (DamagedFile, png_chunks.zlib.error) as problem:
+    except (DamagedFile, zlib.error) as problem:
         decoded.flag("profile-broken", f"the colour profile in the file cannot be used: {problem}")
     decoded.space, notes = png_colour.space(layout)
     decoded.notes += notes
@@ -128,10 +129,10 @@ def _add_colour(decoded: raster.Decoded, layout: png_chunks.Layout) -> None:
 
 def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
     """Return the frame as PNG: 8 bits where the frame has 8, else 16."""
-    pixels = frame.pixels if frame.pixels.dtype == np.uint8 else raster.to_sixteen_bits(frame.pixels)
+    pixels = frame.pixels if frame.pixels.dtype == np.uint8 else raster_depth.to_sixteen_bits(frame.pixels)
     channels = pixels[..., :1] if raster.is_grey(frame) else pixels
     if frame.alpha is not None:
-        alpha = frame.alpha if frame.alpha.dtype == np.uint8 else raster.to_sixteen_bits(frame.alpha)
+        alpha = frame.alpha if frame.alpha.dtype == np.uint8 else raster_depth.to_sixteen_bits(frame.alpha)
         channels = np.concatenate([channels, alpha[..., None]], axis=2)
     if channels.shape[2] == 1:
         channels = channels[..., 0]
@@ -142,7 +143,7 @@ def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
 def _chunks(frame: Frame, icc: bytes | None, carried: Metadata) -> list[tuple[bytes, bytes]]:
     chunks: list[tuple[bytes, bytes]] = []
     if icc is not None:
-        chunks.append((b"iCCP", b"ICC profile\0\0" + png_chunks.zlib.compress(icc, 9)))
+        chunks.append((b"iCCP", b"ICC profile\0\0" + zlib.compress(icc, 9)))
     elif frame.encoding.get("untagged") == frame.space.name:
         chunks += frame.encoding.get("colour_chunks", ())
     if frame.encoding.get("pixels_per_metre"):

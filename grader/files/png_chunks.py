@@ -13,6 +13,7 @@ from dataclasses import dataclass, field
 from typing import Final
 
 from grader.errors import DamagedFile, UnsupportedFile
+from grader.files.border import RECOPY_HINT
 
 SIGNATURE: Final = b"\x89PNG\r\n\x1a\n"
 _KNOWN_CRITICAL: Final = {b"IHDR", b"PLTE", b"IDAT", b"IEND"}
@@ -45,27 +46,14 @@ def parse(data: bytes) -> Layout:
     UnsupportedFile
         There is a critical chunk of an unknown type.
     """
-    layout: Layout | None = None
-    position, has_data = len(SIGNATURE), False
-    while True:
+    kind, body, sound, position = _chunk(data, len(SIGNATURE))
+    if kind != b"IHDR" or not sound:
+        raise DamagedFile("its header is damaged")
+    layout, has_data = _header(body), False
+    while kind != b"IEND":
         kind, body, sound, position = _chunk(data, position)
-        if layout is None:
-            if kind != b"IHDR" or not sound:
-                raise DamagedFile("its header is damaged")
-            layout = _header(body)
-            continue
-        critical = not kind[0] & 0x20
-        if critical and not sound:
-            raise DamagedFile("its data are damaged (a checksum is wrong)")
-        if critical and kind not in _KNOWN_CRITICAL:
-            raise UnsupportedFile(f"it needs an unknown kind of chunk ({kind.decode('latin-1')})")
+        _take(layout, kind, body, sound=sound)
         has_data = has_data or kind == b"IDAT"
-        if kind == b"IEND":
-            break
-        if not sound:
-            layout.bad.append(kind.decode("latin-1"))
-        elif kind != b"IDAT":
-            layout.chunks.setdefault(kind, body)
     if not has_data:
         raise DamagedFile("it holds no picture data")
     if layout.colour_type == PALETTE and not layout.chunks.get(b"PLTE"):
@@ -73,17 +61,26 @@ def parse(data: bytes) -> Layout:
     return layout
 
 
+def _take(layout: Layout, kind: bytes, body: bytes, *, sound: bool) -> None:
+    """Keep a chunk, or refuse the file for it; an ancillary one that is damaged is left out."""
+    critical = not kind[0] & 0x20
+    if critical and not sound:
+        raise DamagedFile("its data are damaged (a checksum is wrong)")
+    if critical and kind not in _KNOWN_CRITICAL:
+        raise UnsupportedFile(f"it needs an unknown kind of chunk ({kind.decode('latin-1')})")
+    if not sound:
+        layout.bad.append(kind.decode("latin-1"))
+    elif kind != b"IDAT":
+        layout.chunks.setdefault(kind, body)
+
+
 def _chunk(data: bytes, position: int) -> tuple[bytes, bytes, bool, int]:
     if position + 12 > len(data):
-        raise DamagedFile(
-            "the file ends before the picture does", hint="copy it again from the card or the backup"
-        )
+        raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
     length, kind = struct.unpack_from(">I4s", data, position)
     end = position + 12 + length
     if end > len(data):
-        raise DamagedFile(
-            "the file ends before the picture does", hint="copy it again from the card or the backup"
-        )
+        raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
     body = memoryview(data)[position + 8 : end - 4]
     (checksum,) = struct.unpack_from(">I", data, end - 4)
     sound = zlib.crc32(body, zlib.crc32(kind)) == checksum

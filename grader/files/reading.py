@@ -10,7 +10,7 @@ from typing import Final, Literal
 
 from grader.errors import DamagedFile, UnsupportedFile
 from grader.files import border, jpeg, png, raster_reduce, raw, tiff
-from grader.files.border import CONVERT_HINT
+from grader.files.border import CONVERT_HINT, RECOPY_HINT
 from grader.model import Frame, ReadLimits
 
 Kind = Literal["raw", "tiff", "jpeg", "png"]
@@ -108,7 +108,7 @@ def kind_of(path: Path, limits: ReadLimits = _LIMITS) -> Kind:
         with path.open("rb") as stream:
             head = stream.read(512)
         if not head:
-            raise DamagedFile("the file is empty", hint="copy it again from the card or the backup")
+            raise DamagedFile("the file is empty", hint=RECOPY_HINT)
         if head.startswith((b"\xff\xd8\xff", _PNG_MAGIC)):
             _check_length(state.st_size, limits)
             return "jpeg" if head[0] == 0xFF else "png"
@@ -126,7 +126,7 @@ def _check_length(size: int, limits: ReadLimits) -> None:
 
 def _unknown(head: bytes) -> UnsupportedFile | DamagedFile:
     if not head.strip(b"\0"):
-        return DamagedFile("the file holds only zeros", hint="copy it again from the card or the backup")
+        return DamagedFile("the file holds only zeros", hint=RECOPY_HINT)
     if head[1:4] == b"PNG" or head[:2] == b"\xff\xd8":
         return DamagedFile(
             "the first bytes of the picture are damaged", hint="copy it again without conversion"

@@ -11,7 +11,7 @@ from typing import Any, Final
 import tifffile
 
 from grader.errors import UnsupportedFile
-from grader.files import metadata, raster, tiff_check, tiff_pixels
+from grader.files import metadata, raster_frame, tiff_check, tiff_pixels
 from grader.model import Frame, ReadLimits
 
 _MOST_PAGES: Final = 256
@@ -50,7 +50,7 @@ def read(path: Path, limits: ReadLimits) -> Frame:
             "only that one is written",
         )
     decoded.facts, decoded.metadata = metadata.from_tiff(path, limits)
-    return raster.frame(decoded, path, sha256)
+    return raster_frame.frame_from_decoded(decoded, path, sha256)
 
 
 def choose(tif: Any) -> Choice:

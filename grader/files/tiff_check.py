@@ -6,7 +6,7 @@ from math import ceil
 from typing import Any, Final
 
 from grader.errors import DamagedFile, UnsupportedFile
-from grader.files.border import CONVERT_HINT
+from grader.files.border import CONVERT_HINT, RECOPY_HINT
 from grader.files.raster import check_size
 from grader.model import ReadLimits
 
@@ -30,8 +30,9 @@ _REFUSED: Final = {
     34892: "this is linear sensor data without a camera's description",
     51177: "a depth map is not a photograph",
 }
-UNCOMPRESSED, JPEG = 1, 7
-_OLD_JPEG: Final = 6
+UNCOMPRESSED, OLD_JPEG, JPEG = 1, 6, 7
+JPEG_KINDS: Final = (7, 34892, 33007)
+"""Compressions whose decoder turns YCbCr into RGB."""
 _MOST_EXPANSION: Final = {1: 1, 5: 2600, 8: 1040, 32946: 1040, 32773: 66}
 """Most bytes out per byte in: LZW 3,838 bytes from a 12-bit code, deflate 258 from 2 bits, PackBits 128 from 2."""
 
@@ -67,7 +68,7 @@ def _check_kind(page: Any) -> None:
         raise UnsupportedFile("it is a volume, not a photograph", hint=CONVERT_HINT)
     if photometric == CMYK and int(page.tags.valueof(332, 1)) != 1:
         raise UnsupportedFile("its inks are not cyan, magenta, yellow and black", hint=CONVERT_HINT)
-    if page.compression == _OLD_JPEG:
+    if page.compression == OLD_JPEG:
         raise UnsupportedFile(
             "its old-style JPEG compression was withdrawn from the standard", hint=CONVERT_HINT
         )
@@ -113,19 +114,34 @@ def _check_segments(page: Any, file_bytes: int, limits: ReadLimits) -> None:
         if page.rowsperstrip < 1:
             raise DamagedFile("its strips have no rows")
         expected = ceil(page.imagelength / page.rowsperstrip) * planes
+    if int(page.compression) == UNCOMPRESSED and not page.is_subsampled:
+        _complete_counts(page, expected)
     offsets, counts = page.dataoffsets[:expected], page.databytecounts[:expected]
     if len(offsets) < expected or len(counts) < expected:
-        raise DamagedFile(
-            f"{expected - min(len(offsets), len(counts))} of {expected} pieces of the picture are missing"
-        )
+        missing = expected - min(len(offsets), len(counts))
+        raise DamagedFile(f"{missing} of {expected} pieces of the picture are missing")
     for offset, count in zip(offsets, counts, strict=True):
         if offset <= 0 or count <= 0:
             raise DamagedFile("a piece of the picture is missing")
         if offset + count > file_bytes:
-            raise DamagedFile(
-                "the file ends before the picture does", hint="copy it again from the card or the backup"
-            )
+            raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
     _check_expansion(page, sum(counts))
+
+
+def _complete_counts(page: Any, expected: int) -> None:
+    """Replace byte counts that are missing or wrong by what uncompressed pieces take: some writers get them wrong."""
+    samples = 1 if int(page.planarconfig) == 2 else page.samplesperpixel
+    if page.is_tiled:
+        pieces = [(page.tilelength, page.tilewidth)] * expected
+    else:
+        starts = range(0, page.imagelength, page.rowsperstrip)
+        strips = [(min(page.rowsperstrip, page.imagelength - top), page.imagewidth) for top in starts]
+        pieces = strips * (expected // len(strips))
+    needed = tuple(rows * ceil(columns * samples * page.bitspersample / 8) for rows, columns in pieces)
+    if len(page.databytecounts) < expected or any(
+        n != c for n, c in zip(needed, page.databytecounts, strict=False)
+    ):
+        page.databytecounts = needed
 
 
 def _check_expansion(page: Any, stored: int) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any, Final
 
@@ -9,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.errors import DamagedFile
-from grader.files import tiff_check
+from grader.files import jpeg_entropy, jpeg_markers, tiff_check, tiff_ycbcr
 from grader.files.raster import Decoded, Kind
 
 _BUFFER_BYTES: Final = 8 << 20
@@ -49,6 +50,10 @@ def decode(page: Any, path: Path) -> Decoded:
 
 def _samples(page: Any) -> NDArray[Any]:
     """Return (H, W, samples), native byte order."""
+    if int(page.photometric) == tiff_check.YCBCR and int(page.compression) not in tiff_check.JPEG_KINDS:
+        return tiff_ycbcr.samples(page)
+    if int(page.compression) == tiff_check.JPEG:
+        _check_jpeg(page)
     data = page.asarray(squeeze=False, buffersize=_BUFFER_BYTES, maxworkers=1)
     data = data[:, 0]  # (separate samples, H, W, contiguous samples)
     data = np.moveaxis(data[..., 0], 0, -1) if int(page.planarconfig) == 2 else data[0]
@@ -56,6 +61,22 @@ def _samples(page: Any) -> NDArray[Any]:
         raise DamagedFile("the picture has another size than its header claims")
     native = data.dtype.newbyteorder("=")
     return np.ascontiguousarray(data, dtype=native)
+
+
+def _check_jpeg(page: Any) -> None:
+    """Check the coded data of every strip or tile: the decoder would fill what is missing with grey."""
+    tables = page.jpegtables or b""
+    for data in segments(page):
+        layout = jpeg_markers.parse(data, tables)
+        jpeg_entropy.check(data, layout)
+
+
+def segments(page: Any) -> Iterator[bytes]:
+    """Return the stored bytes of each strip or tile."""
+    handle = page.parent.filehandle
+    for offset, count in zip(page.dataoffsets, page.databytecounts, strict=False):
+        handle.seek(offset)
+        yield handle.read(count)
 
 
 def _profile(page: Any) -> bytes | None:

@@ -9,7 +9,7 @@ import numpy as np
 import tifffile
 from numpy.typing import NDArray
 
-from grader.files import metadata, raster
+from grader.files import metadata, raster, raster_alpha, raster_depth
 from grader.files.tiff_pixels import inverted
 from grader.model import Frame, Metadata
 
@@ -57,7 +57,7 @@ def _samples(frame: Frame, encoding: Any) -> tuple[NDArray[Any], str, int | None
     pixels, photometric = frame.pixels, "rgb"
     alpha_kind = frame.encoding.get("alpha", "straight")
     if frame.alpha is not None and alpha_kind == "associated":
-        pixels = raster.associated(pixels, frame.alpha)
+        pixels = raster_alpha.associated(pixels, frame.alpha)
     if raster.is_grey(frame):
         pixels, photometric = pixels[..., :1], "minisblack"
     pixels = _depth(pixels, frame, encoding)
@@ -86,7 +86,7 @@ def _depth(pixels: NDArray[Any], frame: Frame, encoding: Any) -> NDArray[Any]:
     if not encoding or _recoded(frame):
         return pixels
     if encoding["sample"] == "uint":
-        return raster.unscaled(pixels, encoding["bits"])
+        return raster_depth.unscaled(pixels, encoding["bits"])
     if pixels.dtype != np.float32:
         return pixels
     kind = {2: np.float16, 8: np.float64}.get(encoding["sample_bytes"], np.float32)
