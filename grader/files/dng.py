@@ -74,8 +74,10 @@ def corrected_neutral(header: Header, correction: Correction) -> NDArray[np.floa
     """Return the sensor's values (3,), green = 1, that a correction makes neutral; None without a matrix."""
     if header.sensor is None:
         return None
-    working = np.linalg.solve(np.asarray(correction.matrix, np.float64), np.ones(3))
-    response = header.sensor.as_shot_neutral * (header.sensor.sensor_from_rec2020 @ working)
+    daylight = np.linalg.solve(np.asarray(correction.matrix, np.float64), np.ones(3))
+    if header.daylight_from_decoded is not None:
+        daylight = header.daylight_from_decoded @ daylight
+    response = header.sensor.daylight_neutral * (header.sensor.sensor_from_rec2020 @ daylight)
     response = np.maximum(response, _LEAST * response.max())
     return np.asarray(response / response[1])
 

@@ -18,8 +18,8 @@ import rawpy
 from numpy.typing import NDArray
 
 from grader.colour.spaces import SPACES
-from grader.errors import DamagedFile, MissingFile, UnsupportedFile
-from grader.files import metadata, raster_reduce
+from grader.errors import DamagedFile, UnsupportedFile
+from grader.files import border, metadata, raster_reduce
 from grader.files.raw_colour import (
     RawColour,
     colour_of,
@@ -27,7 +27,7 @@ from grader.files.raw_colour import (
     sensor_multipliers,
     sensor_of,
 )
-from grader.files.raw_identify import is_dng, is_raw
+from grader.files.raw_identify import dng_colour, is_dng, is_raw
 from grader.files.raw_reduce import reduce_mosaic
 from grader.model import Frame, Header, Metadata, ReadLimits
 
@@ -46,11 +46,11 @@ _ORIENTATION: Final = {0: 1, 1: 2, 3: 3, 2: 4, 4: 5, 6: 6, 7: 7, 5: 8}
 """Exif orientation by LibRaw's flip (bits: 1 mirror columns, 2 mirror rows, 4 swap axes)."""
 _SIX_LEAST_PX: Final = 512
 """LibRaw's own demosaicing of 6x6 filter arrays works in tiles of this size and refuses smaller pictures."""
-_TINY_PX: Final = 16
+_TINY_PX: Final = 64
 _BLACK_LEVEL: Final = 0.002
 """A frame whose 99.9th percentile stays below this share of white is called all black. (judgement)"""
-_WHITE_SHARE: Final = 0.99
-"""A frame of which this share is at white is called all white. (judgement)"""
+_WHITE_LEVEL, _WHITE_SHARE = 0.995, 0.99
+"""A frame of which 99 % is at white (its top half per cent) is called all white. (judgement)"""
 _TOP: Final = 65_535
 _RECOPY: Final = "copy it again from the card or the backup"
 
@@ -120,44 +120,33 @@ def read_reduced(path: str | PathLike[str], limits: ReadLimits | None = None, ta
 def _opened(path: str | PathLike[str], limits: ReadLimits) -> Iterator[Any]:
     """Open a raw file, refuse it by its header, unpack it; translate what LibRaw raises."""
     raw = rawpy.RawPy()
-    try:
-        _open(raw, path)
-        sizes = raw.sizes
-        pixels = max(sizes.raw_width * sizes.raw_height, sizes.width * sizes.height)
-        if pixels > limits.max_pixels:
-            raise UnsupportedFile(
-                f"the picture has {pixels / 1e6:.0f} million pixels, the limit is {limits.max_pixels / 1e6:.0f}",
-                path=path,
-                hint="raise --max-pixels if the file is sound",
-            )
-        raw.unpack()
-        yield raw
-    except (
-        rawpy.LibRawFileUnsupportedError,
-        rawpy.LibRawNotImplementedError,
-        NotImplementedError,
-    ) as problem:
+    with border.reading(path):
+        try:
+            _open(raw, path)
+            _check_size(raw, limits)
+            raw.unpack()
+            yield raw
+        except (rawpy.LibRawFileUnsupportedError, rawpy.LibRawNotImplementedError) as problem:
+            hint = "convert it to DNG or TIFF"
+            raise UnsupportedFile("this kind of raw file is not known, or too small", hint=hint) from problem
+        except (rawpy.LibRawTooBigError, rawpy.LibRawUnsufficientMemoryError) as problem:
+            raise UnsupportedFile("the raw file needs more memory than LibRaw allows") from problem
+        except rawpy.LibRawError as problem:
+            raise DamagedFile(
+                f"the raw file cannot be decoded ({_words(problem)})", hint=_RECOPY
+            ) from problem
+        finally:
+            raw.close()
+
+
+def _check_size(raw: Any, limits: ReadLimits) -> None:
+    sizes = raw.sizes
+    pixels = max(sizes.raw_width * sizes.raw_height, sizes.width * sizes.height)
+    if pixels > limits.max_pixels:
         raise UnsupportedFile(
-            "this kind of raw file is not known", path=path, hint="convert it to DNG or TIFF"
-        ) from problem
-    except (rawpy.LibRawTooBigError, rawpy.LibRawUnsufficientMemoryError, MemoryError) as problem:
-        raise UnsupportedFile("the raw file needs more memory than there is", path=path) from problem
-    except FileNotFoundError as problem:
-        raise MissingFile("there is no such file", path=path, hint="check the path") from problem
-    except (
-        rawpy.LibRawError,
-        ArithmeticError,
-        LookupError,
-        OSError,
-        RuntimeError,
-        TypeError,
-        ValueError,
-    ) as problem:
-        raise DamagedFile(
-            f"the raw file cannot be decoded ({_words(problem)})", path=path, hint=_RECOPY
-        ) from problem
-    finally:
-        raw.close()
+            f"the picture has {pixels / 1e6:.0f} million pixels, the limit is {limits.max_pixels / 1e6:.0f}",
+            hint="raise --max-pixels if the file is sound",
+        )
 
 
 def _words(problem: BaseException) -> str:
@@ -169,37 +158,41 @@ def _words(problem: BaseException) -> str:
 
 
 def _open(raw: Any, path: str | PathLike[str]) -> None:
-    try:
-        raw.open_file(fspath(path))
-    except UnicodeEncodeError:  # a name that is no UTF-8: LibRaw gets the bytes instead
-        with Path(path).open("rb") as stream:
+    with Path(path).open("rb") as stream:  # LibRaw does not say why a file cannot be opened
+        try:
+            raw.open_file(fspath(path))
+        except UnicodeEncodeError:  # a name that is no UTF-8: LibRaw gets the bytes instead
             raw.open_buffer(stream)
 
 
 def _decoded(raw: Any, colour: RawColour, *, half_size: bool = False) -> NDArray[np.uint16]:
     """Return LibRaw's decode (H, W, 3); a sensor without colour gives three equal channels."""
-    balance: dict[str, Any] = {"user_wb": [float(m) for m in colour.balance]}
+    options: dict[str, Any] = {"user_wb": [float(m) for m in colour.balance]}
     stacked = raw.raw_type == rawpy.RawType.Stack
     if stacked and colour.as_shot_usable:
-        balance = {"use_camera_wb": True}  # some of these have their balance applied already; LibRaw knows
+        options = {"use_camera_wb": True}  # some of these have their balance applied already; LibRaw knows
     sizes = raw.sizes
     if (
         raw.raw_pattern is not None
         and len(raw.raw_pattern) == 6
         and min(sizes.width, sizes.height) < _SIX_LEAST_PX
     ):
-        balance["demosaic_algorithm"] = rawpy.DemosaicAlgorithm.LINEAR
+        options["demosaic_algorithm"] = rawpy.DemosaicAlgorithm.LINEAR
     black = raw.black_level_per_channel
     if stacked and black[3] < min(black[:3]):  # LibRaw forgets black when it scales demosaiced kinds
-        balance["user_sat"] = max(raw.white_level - min(black[:3]), 1)
-    pixels = raw.postprocess(half_size=half_size, **balance, **_DECODE)
+        options["user_sat"] = max(raw.white_level - min(black[:3]), 1)
+    if (
+        colour.working_from_balanced is None
+    ):  # sensor colours lie near Rec.2020's: better than a broken matrix
+        options["output_color"] = rawpy.ColorSpace.raw
+    pixels = raw.postprocess(half_size=half_size, **{**_DECODE, **options})
     if pixels.ndim == 2 or pixels.shape[2] == 1:
         pixels = np.repeat(pixels.reshape(*pixels.shape[:2], 1), 3, axis=2)
     return np.ascontiguousarray(pixels[..., :3])
 
 
 def _header(raw: Any, path: str | PathLike[str], limits: ReadLimits) -> tuple[Header, Metadata, RawColour]:
-    colour = colour_of(raw, dng=is_dng(path))
+    colour = colour_of(raw, dng_colour(path))
     facts, blobs = _facts(raw, path, limits)
     flags, notes = _judged_colour(raw, colour)
     sizes = raw.sizes
@@ -245,7 +238,7 @@ def _frame(header: Header, blobs: Metadata, pixels: NDArray[np.uint16]) -> Frame
     found = []
     if np.percentile(small.max(axis=2), 99.9) <= _BLACK_LEVEL * _TOP:
         found.append(("dark", "the decode is all black"))
-    if np.mean(small.min(axis=2) >= _TOP) >= _WHITE_SHARE:
+    if np.mean(small.min(axis=2) >= _WHITE_LEVEL * _TOP) >= _WHITE_SHARE:
         found.append(("clipped", "the decode is all white"))
     if found:
         flags, notes = zip(*found, strict=True)

@@ -8,7 +8,8 @@ from typing import BinaryIO, Final
 
 import rawpy
 
-from grader.files.metadata_tree import BrokenStructure, Places, Structure
+from grader.files.metadata_tree import BrokenStructure, Places, Structure, numbers
+from grader.files.raw_colour import AS_SHOT_WHITE_XY, COLOUR_MATRICES, DngColour
 
 _DNG_VERSION, _MAKE, _WIDTH, _HEIGHT, _PHOTOMETRIC = 0xC612, 0x010F, 0x0100, 0x0101, 0x0106
 _SENSOR_PHOTOMETRIC: Final = {32_803, 34_892}
@@ -25,6 +26,7 @@ _PICTURE_STARTS: Final = (
 )
 _RAW_STARTS: Final = (b"FUJIFILMCCD-RAW", b"\0MRM", b"FOVb", b"IIRO", b"IIRS", b"MMOR", b"IIU\0")
 _HEADER_BYTES: Final = 32
+_COLOUR_BYTES: Final = 512
 
 
 def is_raw(path: str | PathLike[str]) -> bool:
@@ -56,12 +58,25 @@ def is_raw(path: str | PathLike[str]) -> bool:
 
 def is_dng(path: str | PathLike[str]) -> bool:
     """Return whether a file is a DNG: a TIFF structure with a DNGVersion tag in its first directory."""
+    return dng_colour(path) is not None
+
+
+def dng_colour(path: str | PathLike[str]) -> DngColour | None:
+    """Return a DNG's colour tags as numbers; None where the file is no DNG."""
     try:
         with Path(path).open("rb") as stream:
             structure = Structure(stream)
-            return _DNG_VERSION in structure.directory(structure.first)[0]
+            places, _ = structure.directory(structure.first)
+            if _DNG_VERSION not in places:
+                return None
+            tags = {}
+            for tag in (*COLOUR_MATRICES, AS_SHOT_WHITE_XY):
+                field = structure.field(places[tag], _COLOUR_BYTES) if tag in places else None
+                if field is not None:
+                    tags[tag] = numbers(field, structure.order)
+            return tags
     except BrokenStructure:
-        return False
+        return None
 
 
 def _tiff_is_raw(path: str | PathLike[str], stream: BinaryIO) -> bool:
