@@ -24,7 +24,7 @@ CARD_TINT_DEG: Final = 0.5
 """What nobody knows of an unmeasured grey: 0.7 C*ab at L* 50 turn the light by 0.3 to 0.6 degrees. (judgement)"""
 _CLIPPED_LEVEL: Final = {np.dtype(np.uint8): 254, np.dtype(np.uint16): 65_200}
 """Encoded values from which a channel counts as clipped, as for the proxy."""
-_MOST_PX: Final = 1_000_000
+_MOST_PX: Final = 250_000
 """A larger patch is read at every n-th row and column."""
 _BLOCKS: Final = 8
 _SMALLEST_BLOCK_PX: Final = 4
