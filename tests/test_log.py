@@ -69,7 +69,9 @@ def a_cast(**changes: object) -> Cast:
 
 def test_every_kind_of_line_fits_the_published_schema() -> None:
     measured = valid(measured_line("a.dng", a_cast(), seconds=0.1))
-    correction = Correction(from_xy=(0.44, 0.40), toward_xy=(0.3127, 0.329), matrix=np.eye(3), reason="its own")
+    correction = Correction(
+        from_xy=(0.44, 0.40), toward_xy=(0.3127, 0.329), matrix=np.eye(3), reason="its own"
+    )
     planned = valid(planned_line(measured, correction, residual={"yellow_blue": 0.0, "green_magenta": 0.0}))
     assert "evidence" not in planned
     graded = graded_line(planned, Written("a.tif", "cd" * 32, "tiff", "sRGB", notes=("n",)), Counts(0.1, 0.2))
@@ -102,7 +104,9 @@ def test_a_bomb_in_the_evidence_stays_small() -> None:
     assert cast_from_line(line).evidence.log_likelihood.size <= 1 << 16
 
 
-@pytest.mark.parametrize("damage", [{"cast": None}, {"header": {}}, {"readings": {"x": {"y": 1}}}, {"evidence": {}}])
+@pytest.mark.parametrize(
+    "damage", [{"cast": None}, {"header": {}}, {"readings": {"x": {"y": 1}}}, {"evidence": {}}]
+)
 def test_a_measured_line_of_a_strangers_making_is_a_plain_error(damage: dict) -> None:
     with pytest.raises(DamagedFile, match="measured line"):
         cast_from_line(measured_line("a.dng", a_cast()) | damage)

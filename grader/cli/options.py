@@ -93,14 +93,7 @@ shoot = _options(
     ),
 )
 
-output = _options(
-    click.option(
-        "--out",
-        required=True,
-        type=click.Path(file_okay=False),
-        metavar="DIR",
-        help="Folder for the results.",
-    ),
+encoding = _options(
     click.option(
         "--format",
         "output_format",
@@ -108,20 +101,21 @@ output = _options(
         help="File format to write; dng: a copy of a DNG that opens with the planned balance. [same; RAW: tiff]",
     ),
     click.option("--space", metavar="SPACE", help=f"Colour space to write: {_SPACES}. [source]"),
+    click.option("--tone", type=click.Choice(["standard", "linear"]), help="Tone curve of RAW frames. [standard]"),
+    click.option("--exposure", type=float, metavar="EV", help="Brighten (+) or darken (-) all frames alike. [0]"),
     click.option(
-        "--tone", type=click.Choice(["standard", "linear"]), help="Tone curve of RAW frames. [standard]"
+        "--strip-location", is_flag=True, default=None, help="Leave the place of capture out of the results."
     ),
-    click.option(
-        "--exposure", type=float, metavar="EV", help="Brighten (+) or darken (-) all frames alike. [0]"
-    ),
-    click.option("--strip-location", is_flag=True, help="Leave the place of capture out of the results."),
+)
+
+output = _options(
+    click.option("--out", required=True, type=click.Path(file_okay=False), metavar="DIR", help="Folder for the results."),
+    encoding,
     click.option("--overwrite", is_flag=True, help="Replace results that are there already."),
     click.option("--resume", is_flag=True, help="Go on with an earlier run into the same folder."),
     click.option("--dry-run", is_flag=True, help="Measure and plan, write nothing."),
     click.option("--report", type=_FILE, metavar="FILE", help="Write the report as one HTML file."),
-    click.option(
-        "--contact-sheet", type=_FILE, metavar="FILE.jpg", help="Write before/after pictures on sheets."
-    ),
+    click.option("--contact-sheet", type=_FILE, metavar="FILE.jpg", help="Write before/after pictures on sheets."),
 )
 
 running = _options(
@@ -178,7 +172,7 @@ _RECIPE_FIELDS = (
     "keep_yellow_blue", "keep_green_magenta", "toward", "opponent", "adaptation", "degree", "coloured_light",
     "match_bodies", "tolerance_delta_e_2000",
 )  # fmt: skip
-_OUTPUT_FIELDS = {"format": "output_format", "space": "space", "tone": "tone", "exposure_ev": "exposure"}
+_OUTPUT_FIELDS = {"format": "output_format", "space": "space", "tone": "tone", "exposure_ev": "exposure", "strip_location": "strip_location"}
 
 
 def run_options(given: dict[str, Any]) -> Options:
