@@ -45,9 +45,9 @@ class PatchLimits:
     most_grain: float = 0.6
     """Spread of luminance from pixel to pixel. [relative]"""
     most_saturation: float = 0.30
-    """Oklab chroma at Y = 1; a black body of 1850 K has 0.28."""
+    """Oklab chroma at Y = 1; a black body of 1600 K has 0.29."""
     most_duv: float = 0.030
-    """Distance from the Planckian locus: tubes and LED lamps stay within 0.02."""
+    """Distance from the Planckian locus; the CIE's FL, HP and LED illuminants lie within 0.011."""
 
 
 @dataclass(frozen=True, slots=True)
