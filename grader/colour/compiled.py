@@ -37,7 +37,9 @@ _Function = TypeVar("_Function", bound=Callable[..., Any])
 _told = False
 
 
-def jit(function: _Function | None = None, *, fastmath: bool | set[str] = False) -> Any:
+def jit(
+    function: _Function | None = None, *, fastmath: bool | set[str] = False, error_model: str = "python"
+) -> Any:
     """Return the function compiled without the interpreter lock, its machine code cached on disk.
 
     Parameters
@@ -46,6 +48,8 @@ def jit(function: _Function | None = None, *, fastmath: bool | set[str] = False)
         A function in numba's nopython subset; without it, a decorator is returned.
     fastmath : bool or set of str
         Passed on to numba. [names of LLVM fast-math flags]
+    error_model : {"python", "numpy"}
+        Whether a division by zero raises, or gives an infinity (which alone lets loops become vector code).
 
     Returns
     -------
@@ -61,10 +65,10 @@ def jit(function: _Function | None = None, *, fastmath: bool | set[str] = False)
     8
     """
     if function is None:
-        return lambda wrapped: jit(wrapped, fastmath=fastmath)
+        return lambda wrapped: jit(wrapped, fastmath=fastmath, error_model=error_model)
     if not AVAILABLE:
         return function
-    options: dict[str, Any] = {"nogil": True, "fastmath": fastmath}
+    options: dict[str, Any] = {"nogil": True, "fastmath": fastmath, "error_model": error_model}
     if not Path(function.__code__.co_filename).exists():  # typed at a prompt: nothing to cache by
         return numba.njit(**options)(function)
     try:

@@ -1,0 +1,132 @@
+"""The steps of grading on plain numpy arrays: what they mean, and the way taken where nothing can be compiled.
+
+Float64, a band of pixels at a time; `grader._pixels_kernel` does the same, to the same codes within one.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from grader._pixels_steps import Steps
+from grader.colour import tone, transfer
+from grader.model import Curve
+
+Light = NDArray[np.float64]
+Curves = tuple[Curve, Curve, Curve]
+
+BAND: Final = 1 << 16
+_TINY: Final = 1e-30
+_HUGE: Final = 1e30
+_EDGE: Final = 2e-6
+
+
+def ramp(values: Light, ends: tuple[Any, Any]) -> Light:
+    """Return the smooth step (cubic Hermite) from 0 at the first end to 1 at the second."""
+    share = np.clip((values - float(ends[0])) / (float(ends[1]) - float(ends[0])), 0.0, 1.0)
+    return np.asarray(share * share * (3 - 2 * share))
+
+
+def keep_highlights(source: Light, light: Light, steps: Steps) -> Light:
+    """Return corrected light in which what the file had clipped is white, or what it was.
+
+    A clipped channel was at least what it is now.  Three things follow, all of them growing smoothly with how near
+    to clipping the channels are:
+
+    1. A clipped channel is lifted to the level of the unclipped ones, if all of them are higher after correction,
+       and clipped neighbours are levelled with each other as they were in the file (red and blue only by way of
+       green: together without green they are a magenta lamp, not a white one).  Not for saturated colours.
+    2. Luminance goes back to what the file had.
+    3. What is nearly grey by now becomes grey, the more so if a second channel is clipped.
+
+    Parameters
+    ----------
+    source, light : (N, 3) float64
+        Linear light of the file, and the same after the correction.
+    steps : Steps
+        Luminances and ramps.
+
+    Returns
+    -------
+    (N, 3) float64
+    """
+    clipped = ramp(source, steps.clip)
+    lifted = _lifted(source, light, clipped, steps)
+    wanted = source @ np.array(steps.source_luminance, np.float64)
+    found = np.maximum(lifted @ np.array(steps.luminance, np.float64), _TINY)
+    most, second = clipped.max(1), np.median(clipped, axis=1)
+    scaled = lifted * (1 + most * (wanted / found - 1))[:, None]
+    greyness = lifted.min(1) / (lifted.max(1) + _TINY)
+    grey = np.maximum(most * ramp(greyness, steps.one_clipped), second * ramp(greyness, steps.two_clipped))
+    return np.asarray(scaled + grey[:, None] * (wanted[:, None] - scaled))
+
+
+def _lifted(source: Light, light: Light, clipped: Light, steps: Steps) -> Light:
+    largest = light.max(1)
+    (red, green, blue), (of_red, of_green, of_blue) = light.T, clipped.T
+    share = source / (source.max(1, keepdims=True) + _TINY)
+    likeness = np.maximum(share.min(1), light.min(1) / (largest + _TINY))
+    of_red, of_green, of_blue = ramp(likeness, steps.colour) * clipped.T
+    red_or_more = red + clipped[:, 0] * (largest - red)
+    blue_or_more = blue + clipped[:, 2] * (largest - blue)
+    level = np.maximum(np.minimum(red_or_more, blue_or_more), (clipped * light)[:, ::2].max(1))
+    green = green + of_green * np.maximum(level * share[:, 1] - green, 0.0)
+    red = red + of_red * np.maximum(green * share[:, 0] - red, 0.0)
+    blue = blue + of_blue * np.maximum(green * share[:, 2] - blue, 0.0)
+    return np.stack([red, green, blue], axis=1)
+
+
+def pull_into_gamut(light: Light, steps: Steps) -> tuple[Light, int, int]:
+    """Return light within 0 to 1, and how many pixels were outside by colour and by luminance.
+
+    Towards grey of the same luminance, just as far as needed: hue lines stay straight, and what was inside stays as
+    it was.  Only luminance itself is clipped.
+    """
+    luminance = light @ np.array(steps.luminance, np.float64)
+    held = np.clip(luminance, 0.0, 1.0)
+    below = np.maximum(luminance - light.min(1), 0.0)
+    above = np.maximum(light.max(1) - luminance, 0.0)
+    scale = np.minimum(1.0, np.minimum(held / (below + _TINY), (1 - held) / (above + _TINY)))
+    clipped = (luminance < -_EDGE) | (luminance > 1 + _EDGE)
+    outside = ~clipped & ((light.min(1) < -_EDGE) | (light.max(1) > 1 + _EDGE))
+    pulled = held[:, None] + scale[:, None] * (light - luminance[:, None])
+    return pulled, int(outside.sum()), int(clipped.sum())
+
+
+def grade(
+    source: NDArray[Any],
+    target: NDArray[Any],
+    steps: Steps,
+    curves: tuple[Curves, Curves],
+    *,
+    toned: bool,
+) -> tuple[int, int]:
+    """Grade (H, W, 3) codes into ``target``; return how many pixels were out of gamut, and how many clipped.
+
+    ``curves`` are those of the source's space and of the output's; ``toned`` puts the raw tone curve before the
+    latter.
+    """
+    codes, result = source.reshape(-1, 3), target.reshape(-1, 3)
+    matrix = np.array(steps.matrix, np.float64).reshape(3, 3)
+    white = float(steps.code_white)
+    outside = clipped = 0
+    for start in range(0, len(codes), BAND):
+        band = slice(start, start + BAND)
+        encoded = np.nan_to_num(codes[band] / white, posinf=_HUGE, neginf=-_HUGE)
+        linear = _by_channel(transfer.decode, curves[0], encoded)
+        light = np.einsum("ij,nj->ni", matrix, linear)
+        if linear.max(initial=0.0) > steps.clip[0]:
+            light = keep_highlights(linear, light, steps)
+        if steps.bounded:
+            light, more_outside, more_clipped = pull_into_gamut(light, steps)
+            outside, clipped = outside + more_outside, clipped + more_clipped
+        encoded = _by_channel(transfer.encode, curves[1], tone.apply(light) if toned else light)
+        result[band] = np.rint(np.clip(encoded, 0, 1) * white) if steps.bounded else encoded
+    return outside, clipped
+
+
+def _by_channel(function: Callable[[Curve, Light], Light], curves: Curves, values: Light) -> Light:
+    return np.stack([function(curve, values[:, channel]) for channel, curve in enumerate(curves)], axis=1)
