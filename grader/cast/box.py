@@ -102,4 +102,7 @@ def pixels_of_box(box: Sequence[float], header: Header, shape: tuple[int, ...]) 
 
 
 def _is_fractions(box: Sequence[float]) -> bool:
-    return any(isinstance(v, (float, np.floating)) for v in box)
+    """Whether any of the numbers is a fraction; 10.0 is ten pixels, but 0.0 and 1.0 alone are fractions."""
+    floats = [float(v) for v in box if isinstance(v, (float, np.floating))]
+    whole = all(v.is_integer() for v in floats) and any(v > 1 for v in box)
+    return bool(floats) and not whole

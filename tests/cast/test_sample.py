@@ -97,6 +97,8 @@ def test_noise_widens_the_doubt_but_not_the_texture():
 def test_fractions_and_pixels_name_the_same_patch():
     frame = _frame((0.4, 0.5, 0.45), noise=0.02)
     assert sample_patch(frame, (20, 15, 40, 30)) == sample_patch(frame, (0.25, 0.25, 0.5, 0.5))
+    assert sample_patch(frame, (20.0, 15.0, 40.0, 30.0)).box_px == (20, 15, 40, 30)
+    assert sample_patch(frame, (0.0, 0.0, 1.0, 1.0)).box_px == (0, 0, 80, 60)
 
 
 def test_a_gradient_of_colour_is_doubted():
