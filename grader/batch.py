@@ -12,9 +12,10 @@ from pathlib import Path, PurePath
 from typing import Any, Self
 
 from grader import cast as casts
-from grader import jobs
+from grader import files, jobs
+from grader.colour.difference import grey_delta_e_2000
 from grader.errors import GraderError, PresetError, WriteFailed
-from grader.log import Line, Log, cast_from_line, graded_line, measured_line, planned_line, run_line
+from grader.log import Line, Log, cast_from_line, correction_from_line, graded_line, measured_line, planned_line, run_line
 from grader.model import Cast, Correction, Fixed, ReadLimits, Recipe
 from grader.preset import Preset, make_preset
 from grader.run import Run, now, open_earlier
@@ -46,8 +47,10 @@ class Options:
     """``FRAME@X,Y,W,H``: a known neutral in a frame."""
     stretches: str | os.PathLike[str] | None = None
     """CSV of first file, last file: boundaries fixed by a person."""
-    regrade_delta_e_2000: float = 0.25
-    """On resume, a finished frame is graded again when its correction moved by more than this."""
+    regrade_deg: float = 0.2
+    """On resume, a finished frame is graded again when its correction moved by more than this angle."""
+    against: str | os.PathLike[str] | None = None
+    """A frame or fixed preset whose light every frame is compared with."""
     command: tuple[str, ...] = ()
 
 
@@ -220,8 +223,8 @@ class Batch:
         self.run.add(line)
 
     def _plan(self) -> list[Line]:
-        files = [source.path for source in self.sources if source.path in self.casts]
-        found = [self.casts[file] for file in files]
+        paths = [source.path for source in self.sources if source.path in self.casts]
+        found = [self.casts[path] for path in paths]
         if isinstance(self.settings, Fixed):
             corrections = [casts.fixed_correction(self.settings, cast.header) for cast in found]
         else:
@@ -232,15 +235,17 @@ class Batch:
                 pins=known_lights(self.options.grey_cards, self.options.limits),
                 clocks=self.options.clocks,
             )
-        self.corrections = dict(zip(files, corrections, strict=True))
-        return [self._planned(file) for file in files]
+        self.corrections = dict(zip(paths, corrections, strict=True))
+        return [self._planned(path) for path in paths]
 
     def _planned(self, file: str) -> Line:
         correction = self.corrections[file]
         facts = {} if self.out is None else {"output": {"file": self.targets[file].as_posix()}}
-        line = planned_line(
-            self._measured[file], correction, residual=casts.residual(self.casts[file], correction), **facts
-        )
+        cast = self.casts[file]
+        line = planned_line(self._measured[file], correction, residual=_residual(cast, correction), **facts)
+        if correction.from_xy is not None:
+            multipliers = files.sensor_multipliers(cast.header, correction.from_xy)
+            line["correction"]["sensor_multipliers"] = None if multipliers is None else multipliers.tolist()
         return self.run.add(line)
 
     def _grade_planned(self, planned: list[Line]) -> Iterator[Line]:
@@ -329,8 +334,8 @@ class Batch:
             return None
         if correction is None:
             return line
-        moved = casts.correction_moved(line["correction"]["matrix"], correction.matrix)
-        return line if moved <= self.options.regrade_delta_e_2000 else None
+        moved = casts.correction_moved(correction_from_line(line), correction)
+        return line if moved <= self.options.regrade_deg else None
 
     def _same_version(self) -> bool:
         earlier = self.run.earlier
@@ -393,6 +398,15 @@ def _resolved(preset: Preset | Recipe | Fixed | None, limits: ReadLimits) -> Pre
         return make_preset("unsaved", resolve_toward(Recipe() if preset is None else preset, limits))
     settings = resolve_toward(preset.settings, limits)
     return preset if settings is preset.settings else make_preset(preset.name, settings, preset.description)
+
+
+def _residual(cast: Cast, correction: Correction) -> dict[str, float] | None:
+    """Return the cast that the frame's own measurement would still show after its correction."""
+    left = casts.residual(cast, correction)
+    if left is None or cast.white_xy is None:
+        return None
+    xy = casts.corrected_xy(cast.white_xy, cast.header, correction)
+    return {"yellow_blue": left[0], "green_magenta": left[1], "delta_e_2000": float(grey_delta_e_2000(xy))}
 
 
 def _log_path(out: Path | None, options: Options) -> Path | None:

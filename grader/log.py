@@ -268,6 +268,37 @@ def correction_object(correction: Correction) -> Line:
     }
 
 
+def correction_from_line(line: Mapping[str, Any]) -> Correction:
+    """Rebuild the correction of a planned or graded line.
+
+    Raises
+    ------
+    DamagedFile
+        The line does not hold what such a line holds.
+    """
+    try:
+        given = line["correction"]
+        keep = given["keep"]
+        return Correction(
+            from_xy=None if given["from_xy"] is None else (given["from_xy"][0], given["from_xy"][1]),
+            toward_xy=(given["toward_xy"][0], given["toward_xy"][1]),
+            matrix=np.array(given["matrix"], dtype=np.float64).reshape(3, 3),
+            transform=given["transform"],
+            degree=given["degree"],
+            keep_yellow_blue=keep["yellow_blue"],
+            keep_green_magenta=keep["green_magenta"],
+            shift_mired=given["shift_mired"],
+            shift_duv=given["shift_duv"],
+            stretch=line.get("stretch"),
+            doubt_deg=given.get("doubt_deg"),
+            reason=given["reason"],
+        )
+    except (KeyError, TypeError, ValueError, IndexError) as error:
+        raise DamagedFile(
+            f"a planned line of the log cannot be used ({error})", path=line.get("file"), hint="run anew"
+        ) from error
+
+
 def _cast_object(cast: Cast) -> Line:
     return {
         "yellow_blue": cast.yellow_blue,

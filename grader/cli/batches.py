@@ -97,7 +97,6 @@ def measure(paths: tuple[str, ...], **given: Any) -> int:
 
     preset = options.chosen_preset(_load(given.get("preset")), given)
     batch = _batch(paths, None, preset, given)
-    batch.against = given.get("against")
     code = _run(batch, given, batch.measure)
     if not given["as_json"]:
         click.echo(table(batch.summary, colour=_coloured(), width=_width()), nl=False)

@@ -192,6 +192,7 @@ def run_options(given: dict[str, Any]) -> Options:
         clocks=dict(map(_clock, given.get("clock", ()))),
         grey_cards=tuple(given.get("grey_card", ())),
         stretches=given.get("stretches"),
+        against=given.get("against"),
         command=tuple(sys.argv[1:]),
     )
 
