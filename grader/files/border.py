@@ -1,19 +1,19 @@
-"""The border to foreign decoders: their exceptions become ours, once, by a table.
+"""The border to foreign decoders: their exceptions become ours, once.
 
-Decoders of damaged files raise nearly anything.  Whatever they raise while a file is being read means one of
-three things: the path cannot be opened, the file is larger than memory, or the file is damaged.
+Decoders of damaged files raise nearly anything: ValueError, IndexError, KeyError, ZeroDivisionError, TypeError,
+UnicodeDecodeError, struct.error, zlib.error, errors of their own.  Whatever they raise while a file is being
+read means one of four things: the path cannot be opened, the file is of a kind that the decoder does not know,
+it is larger than memory, or it is damaged.
 """
 
 from __future__ import annotations
 
 import errno
 import logging
-import struct
+import os
 import warnings
-import zlib
 from collections.abc import Iterator
 from contextlib import contextmanager
-from os import PathLike
 from typing import Final
 
 from grader.errors import DamagedFile, GraderError, MissingFile, UnsupportedFile, WriteFailed
@@ -50,32 +50,12 @@ _CANNOT_WRITE: Final[dict[int, tuple[str, str]]] = {
     errno.EIO: ("the disk reports a write error", "check the disk"),
 }
 
-_SUPPORTED_NOT: Final = (NotImplementedError,)
-_DAMAGED: Final = (
-    ArithmeticError,
-    AssertionError,
-    AttributeError,
-    BufferError,
-    EOFError,
-    LookupError,
-    RecursionError,
-    RuntimeError,
-    SyntaxError,
-    TypeError,
-    ValueError,  # UnicodeDecodeError, tifffile.TiffFileError and numpy's reshape among them
-    struct.error,
-    zlib.error,
-    Warning,
-)
-"""What tifffile, imagecodecs (whose errors are RuntimeErrors), Pillow and zlib raise on damaged files."""
-
-
 for _name in ("tifffile", "PIL"):  # their complaints about a file reach the user as one sentence of ours
     logging.getLogger(_name).addHandler(logging.NullHandler())
 
 
 @contextmanager
-def reading(path: str | PathLike[str]) -> Iterator[None]:
+def reading(path: str | os.PathLike[str]) -> Iterator[None]:
     """Let only a `GraderError` that names the file leave the block.
 
     Raises
@@ -88,22 +68,22 @@ def reading(path: str | PathLike[str]) -> Iterator[None]:
             warnings.simplefilter("ignore")
             yield
     except GraderError as problem:
-        if problem.path is not None:
-            raise
-        raise type(problem)(problem.message, path=path, hint=problem.hint) from problem
+        if problem.path is None:
+            problem.path = os.fspath(path)
+        raise
     except MemoryError as problem:
         message = "the picture does not fit into memory"
         raise UnsupportedFile(message, path=path, hint="use fewer workers or a larger machine") from problem
-    except _SUPPORTED_NOT as problem:
+    except NotImplementedError as problem:
         raise UnsupportedFile(_words(problem), path=path, hint=CONVERT_HINT) from problem
     except OSError as problem:
         raise _unreadable(problem, path) from problem
-    except _DAMAGED as problem:
+    except Exception as problem:  # the one place: what decoders raise on damaged files has no bounds
         message = f"the picture cannot be decoded ({_words(problem)})"
         raise DamagedFile(message, path=path, hint=RECOPY_HINT) from problem
 
 
-def _unreadable(problem: OSError, path: str | PathLike[str]) -> GraderError:
+def _unreadable(problem: OSError, path: str | os.PathLike[str]) -> GraderError:
     if problem.errno in _CANNOT_OPEN:
         message, hint = _CANNOT_OPEN[problem.errno]
         return MissingFile(message, path=path, hint=hint)
@@ -112,7 +92,7 @@ def _unreadable(problem: OSError, path: str | PathLike[str]) -> GraderError:
 
 
 @contextmanager
-def writing(path: str | PathLike[str]) -> Iterator[None]:
+def writing(path: str | os.PathLike[str]) -> Iterator[None]:
     """Let only a `GraderError` that names the output leave the block.
 
     Raises
@@ -123,9 +103,9 @@ def writing(path: str | PathLike[str]) -> Iterator[None]:
     try:
         yield
     except GraderError as problem:
-        if problem.path is not None:
-            raise
-        raise type(problem)(problem.message, path=path, hint=problem.hint) from problem
+        if problem.path is None:
+            problem.path = os.fspath(path)
+        raise
     except MemoryError as problem:
         raise WriteFailed("there is not enough memory to encode the picture", path=path) from problem
     except OSError as problem:
@@ -133,7 +113,7 @@ def writing(path: str | PathLike[str]) -> Iterator[None]:
             problem.errno or 0, (f"the file cannot be written ({_words(problem)})", "")
         )
         raise WriteFailed(message, path=path, hint=hint or None) from problem
-    except _DAMAGED as problem:
+    except Exception as problem:  # as above, for encoders
         raise WriteFailed(f"the picture cannot be encoded ({_words(problem)})", path=path) from problem
 
 

@@ -44,7 +44,7 @@ def read(path: Path, limits: ReadLimits) -> Frame:
         data += b"\xff\xd9"
     image: Any = JpegImagePlugin.JpegImageFile(io.BytesIO(data))
     decoded = _decoded(image, layout)
-    decoded.facts, decoded.metadata = metadata.from_jpeg_info(image.info, limits)
+    decoded.facts, decoded.metadata = metadata.from_jpeg_info(image.info, limits, image.applist)
     decoded.space = raster_colour.space_by_exif(decoded.metadata)
     if "mp" in image.info:
         decoded.flag(

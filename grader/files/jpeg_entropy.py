@@ -54,6 +54,8 @@ def check(data: bytes, layout: Layout) -> None:
         raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
     if unchecked:
         return
+    if layout.bits not in (8, 12):
+        raise DamagedFile("its frame header claims an impossible depth", hint=RECOPY_HINT)
     buffer = np.frombuffer(data, np.uint8)
     seen: set[int] = set()
     masks = [

@@ -15,11 +15,12 @@ from numpy.typing import NDArray
 from PIL import PngImagePlugin
 
 from grader.errors import DamagedFile, UnsupportedFile
-from grader.files import metadata, png_chunks, png_colour, raster, raster_depth, raster_frame
+from grader.files import metadata, png_chunks, png_colour, png_interlace, raster, raster_depth, raster_frame
 from grader.files.png_chunks import GREY, GREY_ALPHA, PALETTE, RGBA
 from grader.model import Frame, Metadata, ReadLimits
 
 _COLOURS: Final = {GREY: 1, png_chunks.RGB: 3, PALETTE: 3, GREY_ALPHA: 1, RGBA: 3}
+_CHANNELS: Final = {GREY: 1, png_chunks.RGB: 3, GREY_ALPHA: 2, RGBA: 4}
 _LEVEL: Final = 4
 
 
@@ -64,7 +65,7 @@ def _decoded(data: bytes, image: Any, layout: png_chunks.Layout) -> raster.Decod
         decoded = raster.Decoded(colour, kind, 8, "png", alpha=alpha, encoding=encoding)
         decoded.flag("converted", "the palette was resolved: written as RGB")
     else:
-        samples = _sixteen(data) if layout.bits == 16 else _eight(image)
+        samples = _sixteen(data, layout) if layout.bits == 16 else _eight(image)
         samples = samples.reshape(layout.height_px, layout.width_px, -1)
         alpha = samples[..., colours] if samples.shape[2] > colours else _keyed(samples, layout)
         bits = max(layout.bits, 8)  # Pillow spreads 2 and 4 bits over 8
@@ -81,7 +82,9 @@ def _eight(image: Any) -> NDArray[Any]:
     return np.asarray(image)
 
 
-def _sixteen(data: bytes) -> NDArray[np.uint16]:
+def _sixteen(data: bytes, layout: png_chunks.Layout) -> NDArray[Any]:
+    if layout.interlaced:
+        return png_interlace.decode(data, layout, _CHANNELS[layout.colour_type])
     samples = np.asarray(imagecodecs.png_decode(data))
     if samples.dtype != np.uint16:
         raise DamagedFile("the picture has another depth than its header claims")

@@ -96,6 +96,19 @@ def _header(body: bytes) -> Layout:
     return Layout(width, height, bits, colour_type, bool(interlace))
 
 
+def picture_data(data: bytes) -> bytes:
+    """Return the bodies of all IDAT chunks of a file that `parse` let through, in one piece."""
+    bodies, position = [], len(SIGNATURE)
+    while position + 12 <= len(data):
+        length, kind = struct.unpack_from(">I4s", data, position)
+        if kind == b"IDAT":
+            bodies.append(data[position + 8 : position + 8 + length])
+        elif kind == b"IEND":
+            break
+        position += 12 + length
+    return b"".join(bodies)
+
+
 def chunk(kind: bytes, body: bytes) -> bytes:
     """Return one chunk with its length and checksum."""
     return struct.pack(">I4s", len(body), kind) + body + struct.pack(">I", zlib.crc32(body, zlib.crc32(kind)))

@@ -10,8 +10,9 @@ from typing import Any, Final
 
 import tifffile
 
-from grader.errors import UnsupportedFile
+from grader.errors import DamagedFile
 from grader.files import metadata, raster_frame, tiff_check, tiff_pixels
+from grader.files.border import RECOPY_HINT
 from grader.model import Frame, ReadLimits
 
 _MOST_PAGES: Final = 256
@@ -63,7 +64,7 @@ def choose(tif: Any) -> Choice:
         ]
     found = [(place, page) for place, page in found if isinstance(page, tifffile.TiffPage)]
     if not found:
-        raise UnsupportedFile("the file holds no picture")
+        raise DamagedFile("its table of contents is missing or damaged", hint=RECOPY_HINT)
     whole = [(place, page) for place, page in found if not int(page.subfiletype) & (_REDUCED | _MASK)]
     place, page = max(whole or found, key=lambda item: item[1].imagewidth * item[1].imagelength)
     return Choice(page, len(found) - 1, place)

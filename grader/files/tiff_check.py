@@ -30,7 +30,17 @@ _REFUSED: Final = {
     34892: "this is linear sensor data without a camera's description",
     51177: "a depth map is not a photograph",
 }
-UNCOMPRESSED, OLD_JPEG, JPEG = 1, 6, 7
+UNCOMPRESSED: Final = 1
+_COMPRESSIONS: Final = frozenset(
+    {1, 5, 8, 32773, 32946, 34925, 50000}  # bytes: none, LZW, deflate, PackBits, deflate, LZMA, zstd
+    | {7, 33007, 34892, 33003, 33004, 33005, 34712}  # JPEG, JPEG 2000
+    | {34887, 34933, 50001, 50002, 52546}  # LERC, PNG, WebP, JPEG XL
+)
+"""Compressions that are read, by their number."""
+_KNOWN: Final = {
+    2: "fax", 3: "fax", 4: "fax", 6: "old-style JPEG (withdrawn from the standard)", 32809: "ThunderScan",
+    32909: "PixarLog", 34661: "JBIG", 34676: "SGI log", 34677: "SGI log", 34934: "JPEG XR",
+}  # fmt: skip
 JPEG_KINDS: Final = (7, 34892, 33007)
 """Compressions whose decoder turns YCbCr into RGB."""
 _MOST_EXPANSION: Final = {1: 1, 5: 2600, 8: 1040, 32946: 1040, 32773: 66}
@@ -55,6 +65,7 @@ def check(page: Any, file_bytes: int, limits: ReadLimits) -> None:
     check_size(page.imagewidth, page.imagelength, limits)
     _check_kind(page)
     _check_samples(page)
+    _check_compression(page)
     _check_segments(page, file_bytes, limits)
 
 
@@ -68,10 +79,6 @@ def _check_kind(page: Any) -> None:
         raise UnsupportedFile("it is a volume, not a photograph", hint=CONVERT_HINT)
     if photometric == CMYK and int(page.tags.valueof(332, 1)) != 1:
         raise UnsupportedFile("its inks are not cyan, magenta, yellow and black", hint=CONVERT_HINT)
-    if page.compression == OLD_JPEG:
-        raise UnsupportedFile(
-            "its old-style JPEG compression was withdrawn from the standard", hint=CONVERT_HINT
-        )
 
 
 def _check_samples(page: Any) -> None:
@@ -102,30 +109,46 @@ def _check_samples(page: Any) -> None:
         )
 
 
+def _check_compression(page: Any) -> None:
+    compression = int(page.compression)
+    if compression not in _COMPRESSIONS:
+        name = _KNOWN.get(compression, f"number {compression}")
+        raise UnsupportedFile(f"its compression is not supported: {name}", hint=CONVERT_HINT)
+
+
 def _check_segments(page: Any, file_bytes: int, limits: ReadLimits) -> None:
     """Every strip or tile must be there, inside the file, and of a size that its picture explains."""
-    planes = page.samplesperpixel if int(page.planarconfig) == 2 else 1
-    if page.is_tiled:
-        if page.tilewidth < 1 or page.tilelength < 1:
-            raise DamagedFile("its tiles have no size")
-        check_size(page.tilewidth, page.tilelength, limits)
-        expected = ceil(page.imagewidth / page.tilewidth) * ceil(page.imagelength / page.tilelength) * planes
-    else:
-        if page.rowsperstrip < 1:
-            raise DamagedFile("its strips have no rows")
-        expected = ceil(page.imagelength / page.rowsperstrip) * planes
+    expected = _pieces(page, limits)
+    _require(expected, len(page.dataoffsets))
     if int(page.compression) == UNCOMPRESSED and not page.is_subsampled:
         _complete_counts(page, expected)
+    _require(expected, len(page.databytecounts))
     offsets, counts = page.dataoffsets[:expected], page.databytecounts[:expected]
-    if len(offsets) < expected or len(counts) < expected:
-        missing = expected - min(len(offsets), len(counts))
-        raise DamagedFile(f"{missing} of {expected} pieces of the picture are missing")
-    for offset, count in zip(offsets, counts, strict=True):
-        if offset <= 0 or count <= 0:
-            raise DamagedFile("a piece of the picture is missing")
-        if offset + count > file_bytes:
-            raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
+    if min(offsets) <= 0 or min(counts) <= 0:
+        raise DamagedFile("a piece of the picture is missing", hint=RECOPY_HINT)
+    if max(offset + count for offset, count in zip(offsets, counts, strict=True)) > file_bytes:
+        raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
     _check_expansion(page, sum(counts))
+
+
+def _pieces(page: Any, limits: ReadLimits) -> int:
+    """Return how many strips or tiles the picture takes."""
+    planes = page.samplesperpixel if int(page.planarconfig) == 2 else 1
+    if not page.is_tiled:
+        if page.rowsperstrip < 1:
+            raise DamagedFile("its strips have no rows")
+        return int(ceil(page.imagelength / page.rowsperstrip) * planes)
+    if page.tilewidth < 1 or page.tilelength < 1:
+        raise DamagedFile("its tiles have no size")
+    check_size(page.tilewidth, page.tilelength, limits)
+    return int(ceil(page.imagewidth / page.tilewidth) * ceil(page.imagelength / page.tilelength) * planes)
+
+
+def _require(expected: int, found: int) -> None:
+    if found < expected:
+        raise DamagedFile(
+            f"{expected - found} of {expected} pieces of the picture are missing", hint=RECOPY_HINT
+        )
 
 
 def _complete_counts(page: Any, expected: int) -> None:

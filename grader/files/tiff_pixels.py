@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.errors import DamagedFile
-from grader.files import jpeg_entropy, jpeg_markers, tiff_check, tiff_ycbcr
+from grader.files import tiff_check, tiff_embedded, tiff_ycbcr
 from grader.files.raster import Decoded, Kind
 
 _BUFFER_BYTES: Final = 8 << 20
@@ -52,8 +52,7 @@ def _samples(page: Any) -> NDArray[Any]:
     """Return (H, W, samples), native byte order."""
     if int(page.photometric) == tiff_check.YCBCR and int(page.compression) not in tiff_check.JPEG_KINDS:
         return tiff_ycbcr.samples(page)
-    if int(page.compression) == tiff_check.JPEG:
-        _check_jpeg(page)
+    tiff_embedded.check(page, segments(page))
     data = page.asarray(squeeze=False, buffersize=_BUFFER_BYTES, maxworkers=1)
     data = data[:, 0]  # (separate samples, H, W, contiguous samples)
     data = np.moveaxis(data[..., 0], 0, -1) if int(page.planarconfig) == 2 else data[0]
@@ -61,14 +60,6 @@ def _samples(page: Any) -> NDArray[Any]:
         raise DamagedFile("the picture has another size than its header claims")
     native = data.dtype.newbyteorder("=")
     return np.ascontiguousarray(data, dtype=native)
-
-
-def _check_jpeg(page: Any) -> None:
-    """Check the coded data of every strip or tile: the decoder would fill what is missing with grey."""
-    tables = page.jpegtables or b""
-    for data in segments(page):
-        layout = jpeg_markers.parse(data, tables)
-        jpeg_entropy.check(data, layout)
 
 
 def segments(page: Any) -> Iterator[bytes]:

@@ -36,7 +36,9 @@ def write(frame: Frame, path: Path, icc: bytes | None, carried: Metadata) -> tup
     if alpha is not None:
         options["extrasamples"] = [alpha]
     big = bool(encoding.get("bigtiff")) or data.nbytes > _BIG_BYTES
-    with tifffile.TiffWriter(path, bigtiff=big, byteorder=encoding.get("byteorder", "<")) as writer:
+    with tifffile.TiffWriter(
+        path, bigtiff=big, byteorder=encoding.get("byteorder", metadata.byte_order(carried))
+    ) as writer:
         writer.write(
             data,
             photometric=photometric,

@@ -10,7 +10,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Final, Literal
 
-from grader.errors import WriteFailed
+from grader.errors import PresetError, WriteFailed
 from grader.files import border, jpeg, metadata, png, profile_build, raster, tiff_write
 from grader.model import Correction, Frame, Header, Metadata, Output, Written
 
@@ -82,9 +82,13 @@ def write(
     ------
     WriteFailed
         With the cause; nothing of it is left behind.
+    PresetError
+        The format is ``dng``: see ``grader.files.rewrite_raw``.
     """
     output = output or Output()
     place = Path(target)
+    if output.format == "dng":
+        raise PresetError("a raw copy is not written from pixels", path=place, hint="use rewrite_raw")
     with border.writing(place):
         _check_target(frame, place, overwrite=overwrite)
         kind = _kind(frame.header, output, place)
