@@ -147,6 +147,10 @@ class Metadata:
     """A TIFF structure (II or MM first) with IFD0, Exif and GPS directories."""
     xmp: bytes | None = None
     iptc: bytes | None = None
+    resources: bytes | None = None
+    """Image resource blocks other than IPTC that stay true, clipping paths above all."""
+    xmp_extension: bytes | None = None
+    """What of the XMP does not fit into one JPEG segment (outputs only)."""
     notes: tuple[str, ...] = ()
     """What could not be carried over, in plain words."""
 

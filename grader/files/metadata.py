@@ -5,11 +5,8 @@ Metadata are carried as bytes.  What is broken is left out with a note; a pictur
 
 from __future__ import annotations
 
-import binascii
 import io
-import re
-import zlib
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from os import PathLike
 from pathlib import Path
 from typing import Any, BinaryIO, Final
@@ -18,10 +15,19 @@ from grader.files import xmp
 from grader.files.metadata_build import append_tree, tree_bytes
 from grader.files.metadata_facts import facts_of
 from grader.files.metadata_output import for_output
+from grader.files.metadata_segments import (
+    hex_profile_of,
+    jpeg_segments,
+    png_chunks,
+    resources_of,
+    split_resources,
+    xmp_extension_of,
+)
 from grader.files.metadata_tree import BrokenStructure, Field, Tree, read_tree
 from grader.model import Metadata, ReadLimits
 
 __all__ = [
+    "byte_order",
     "for_output",
     "from_jpeg_info",
     "from_png_info",
@@ -32,7 +38,6 @@ __all__ = [
 ]
 
 XMP_TAG, IPTC_TAG, RESOURCES_TAG = 0x02BC, 0x83BB, 0x8649
-_IPTC_RESOURCE: Final = 0x0404
 PICTURE_TAGS: Final = frozenset(
     {
         0xFE,
@@ -56,6 +61,8 @@ RAW_TAGS: Final = frozenset({*range(0xC612, 0xC7B6), *range(0xCD2C, 0xCD50)})
 """Tags of the DNG specification, which describe sensor data (its 1.7.1 release ends at 0xCD4C)."""
 _KEPT_DNG: Final = frozenset({0xC614, 0xC62F, 0xC630})
 """UniqueCameraModel, CameraSerialNumber and LensInfo tell the body and the lens."""
+_BIG_ONLY: Final = (16, 17, 18)
+"""Types that only BigTIFF knows."""
 
 Facts = dict[str, Any]
 
@@ -87,28 +94,49 @@ def from_tiff(
     except BrokenStructure as problem:
         return {"notes": (f"the metadata cannot be read: {problem}",)}, Metadata()
     packet = tree.ifd0.pop(XMP_TAG, None)
-    iptc = _iptc(tree.ifd0.pop(IPTC_TAG, None), tree.ifd0.pop(RESOURCES_TAG, None))
+    direct, chain = _iptc(tree.ifd0.pop(IPTC_TAG, None)), tree.ifd0.pop(RESOURCES_TAG, None)
+    iptc, resources = split_resources(chain.data) if chain else (None, None)
     _without_sensor(tree)
-    return _gather(tree, packet.data if packet else None, iptc)
+    return _gather(tree, packet.data if packet else None, direct or iptc, resources)
 
 
-def from_jpeg_info(info: Mapping[Any, Any], limits: ReadLimits | None = None) -> tuple[Facts, Metadata]:
-    """Return what Pillow found in a JPEG's segments (`Image.info`: ``exif``, ``xmp``, ``photoshop``)."""
-    resources = info.get("photoshop")
-    iptc = resources.get(_IPTC_RESOURCE) if isinstance(resources, Mapping) else None
-    return _from_blobs(info.get("exif"), info.get("xmp"), iptc, limits or ReadLimits())
+def from_jpeg_info(
+    info: Mapping[Any, Any], limits: ReadLimits | None = None, segments: Iterable[tuple[str, bytes]] = ()
+) -> tuple[Facts, Metadata]:
+    """Return what Pillow found in a JPEG's segments.
+
+    Parameters
+    ----------
+    info : mapping
+        ``Image.info``: ``exif`` and ``xmp`` count.
+    limits : ReadLimits, optional
+    segments : iterable of (str, bytes)
+        The image's ``applist``, for IPTC, clipping paths, and XMP that is longer than a segment.
+
+    Returns
+    -------
+    facts, metadata
+        As for `from_tiff`.
+    """
+    bounds = limits or ReadLimits()
+    segments = list(segments)
+    chain = resources_of(segments)
+    more = xmp_extension_of(segments, bounds.max_metadata_bytes)
+    return _from_blobs(info.get("exif"), info.get("xmp"), chain, bounds, more)
 
 
 def from_png_info(info: Mapping[Any, Any], limits: ReadLimits | None = None) -> tuple[Facts, Metadata]:
     """Return what Pillow found in a PNG's chunks (`Image.info`: eXIf, the XMP text, older "raw profile" texts)."""
-    exif = info.get("exif") or _raw_profile(info, "exif") or _raw_profile(info, "APP1")
+    exif = info.get("exif") or hex_profile_of(info, "exif") or hex_profile_of(info, "APP1")
     packet = info.get("xmp") or info.get("XML:com.adobe.xmp")
     if isinstance(packet, str):
         packet = packet.encode("utf-8", "surrogateescape")
-    iptc = _raw_profile(info, "iptc")
-    if iptc and iptc.startswith(b"8BIM"):
-        iptc = _resource(iptc)
-    return _from_blobs(exif, packet, iptc, limits or ReadLimits())
+    return _from_blobs(exif, packet, hex_profile_of(info, "iptc"), limits or ReadLimits())
+
+
+def byte_order(metadata: Metadata) -> str:
+    """Return the byte order of the Exif data, ``<`` or ``>``: maker notes keep to it."""
+    return ">" if metadata.exif is not None and metadata.exif.startswith(b"MM") else "<"
 
 
 def write_into_tiff(path: str | PathLike[str], metadata: Metadata) -> None:
@@ -126,136 +154,76 @@ def write_into_tiff(path: str | PathLike[str], metadata: Metadata) -> None:
         tree.ifd0[XMP_TAG] = Field(1, len(metadata.xmp), metadata.xmp)
     if metadata.iptc:
         tree.ifd0[IPTC_TAG] = Field(7, len(metadata.iptc), metadata.iptc)
+    if metadata.resources:
+        tree.ifd0[RESOURCES_TAG] = Field(7, len(metadata.resources), metadata.resources)
     if tree.ifd0 or tree.exif or tree.gps:
         with Path(path).open("r+b") as stream:
             append_tree(stream, tree)
 
 
-def _from_blobs(exif: Any, packet: Any, iptc: Any, limits: ReadLimits) -> tuple[Facts, Metadata]:
+def _from_blobs(
+    exif: Any, packet: Any, chain: Any, limits: ReadLimits, more: bytes | None = None
+) -> tuple[Facts, Metadata]:
+    """Return facts and metadata from an Exif block, an XMP packet, its extension, and IPTC or image resources."""
     notes: list[str] = []
-    blobs: dict[str, bytes | None] = {"Exif": exif, "XMP": packet, "IPTC": iptc}
-    for name, blob in blobs.items():
-        if not isinstance(blob, bytes) or not blob:
-            blobs[name] = None
-        elif len(blob) > limits.max_metadata_bytes:
-            blobs[name] = None
-            notes.append(f"the {name} metadata are too large and were left out")
+    blobs: dict[str, bytes] = {}
+    for name, blob in (("Exif", exif), ("XMP", packet), ("IPTC", chain)):
+        if isinstance(blob, bytes) and blob:
+            if len(blob) <= limits.max_metadata_bytes:
+                blobs[name] = blob
+            else:
+                notes.append(f"the {name} metadata are too large and were left out")
     tree = Tree()
-    data = blobs["Exif"]
-    if data is not None:
+    if "Exif" in blobs:
+        data = blobs["Exif"].removeprefix(b"Exif\0\0")
         try:
-            tree = read_tree(
-                io.BytesIO(data.removeprefix(b"Exif\0\0")), limits.max_metadata_bytes, PICTURE_TAGS
-            )
+            tree = read_tree(io.BytesIO(data), limits.max_metadata_bytes, PICTURE_TAGS)
         except BrokenStructure as problem:
             notes.append(f"the Exif metadata cannot be read and were left out: {problem}")
     tree.notes = notes + tree.notes
-    return _gather(tree, blobs["XMP"], blobs["IPTC"])
+    block = blobs.get("IPTC", b"")
+    iptc, resources = split_resources(block) if block.startswith(b"8BIM") else (block or None, None)
+    return _gather(tree, blobs.get("XMP"), iptc, resources, more)
 
 
-def _gather(tree: Tree, packet_bytes: bytes | None, iptc: bytes | None) -> tuple[Facts, Metadata]:
+def _gather(
+    tree: Tree,
+    packet_bytes: bytes | None,
+    iptc: bytes | None,
+    resources: bytes | None,
+    more: bytes | None = None,
+) -> tuple[Facts, Metadata]:
     packet = None
     if packet_bytes:
         try:
             packet = xmp.Packet(packet_bytes)
+            if more is not None:
+                packet.join(more)
+                packet_bytes = packet.to_bytes()
         except xmp.BrokenPacket as problem:
             tree.notes.append(f"the XMP metadata cannot be read and were left out: {problem}")
-            packet_bytes = None
+            packet_bytes = packet = None
     facts = facts_of(tree, packet)
     if tree.notes:
         facts["notes"] = tuple(tree.notes)
     exif = tree_bytes(tree) if tree.ifd0 or tree.exif or tree.gps else None
-    return facts, Metadata(exif=exif, xmp=packet_bytes or None, iptc=iptc or None)
+    return facts, Metadata(exif=exif, xmp=packet_bytes or None, iptc=iptc, resources=resources)
 
 
 def _without_sensor(tree: Tree) -> None:
     """Drop what describes sensor data (tags below 0xFE are makers' own); move camera tags that TIFF/EP files keep in IFD0 to where Exif has them."""
     for tag in list(tree.ifd0):
-        if tag < 0xFE or (tag in RAW_TAGS and tag not in _KEPT_DNG):
+        if tag < 0xFE or (tag in RAW_TAGS and tag not in _KEPT_DNG) or tree.ifd0[tag].type in _BIG_ONLY:
             del tree.ifd0[tag]
         elif 0x829A <= tag <= 0x829D or 0x8822 <= tag <= 0x8833 or 0x9000 <= tag <= 0xA40C:
             tree.exif.setdefault(tag, tree.ifd0.pop(tag))
 
 
-def _iptc(direct: Field | None, resources: Field | None) -> bytes | None:
-    """Return the IPTC records: from their own tag (some writers call bytes LONG and swap them), or a resource."""
-    if direct is not None:
-        data = direct.data.rstrip(b"\0") if direct.data[:1] == b"\x1c" else direct.data
-        if data[:1] != b"\x1c" and direct.type == 4 and data[3:4] == b"\x1c":
-            data = b"".join(data[i : i + 4][::-1] for i in range(0, len(data), 4)).rstrip(b"\0")
-        return data if data[:1] == b"\x1c" else None
-    return _resource(resources.data) if resources is not None else None
-
-
-def _resource(data: bytes) -> bytes | None:
-    """Return the IPTC block out of a chain of image resources (``8BIM``, number, name, length, data)."""
-    at = 0
-    while data[at : at + 4] == b"8BIM" and at + 12 <= len(data):
-        number = int.from_bytes(data[at + 4 : at + 6], "big")
-        name = 1 + data[at + 6]
-        start = at + 6 + name + name % 2
-        length = int.from_bytes(data[start : start + 4], "big")
-        block = data[start + 4 : start + 4 + length]
-        if number == _IPTC_RESOURCE:
-            return block or None
-        at = start + 4 + length + length % 2
-    return None
-
-
-def _raw_profile(info: Mapping[Any, Any], name: str) -> bytes | None:
-    """Return a profile that older PNG writers keep as hexadecimal text: a name, a length, the digits."""
-    value = info.get(f"Raw profile type {name}")
-    if isinstance(value, bytes):
-        value = value.decode("latin-1")
-    if not isinstance(value, str):
+def _iptc(direct: Field | None) -> bytes | None:
+    """Return the IPTC records of their own TIFF tag; some writers call the bytes LONG and swap them."""
+    if direct is None:
         return None
-    match = re.match(r"\s*\S+\s+(\d+)\s+([0-9a-fA-F\s]*)$", value)
-    if match is None:
-        return None
-    try:
-        return binascii.unhexlify(re.sub(r"\s+", "", match.group(2))) or None
-    except (binascii.Error, ValueError):
-        return None
-
-
-def jpeg_segments(metadata: Metadata) -> bytes:
-    """Return the marker segments APP1 (Exif), APP1 (XMP, in parts where it is long) and APP13 (IPTC) of a JPEG.
-
-    For Pillow's ``save(..., extra=...)``.
-    """
-    parts = []
-    if metadata.exif:
-        parts.append(_segment(0xE1, b"Exif\0\0" + metadata.exif))
-    if metadata.xmp:
-        parts.append(_segment(0xE1, b"http://ns.adobe.com/xap/1.0/\0" + metadata.xmp))
-    if metadata.iptc:
-        block = metadata.iptc + b"\0" * (len(metadata.iptc) % 2)
-        head = b"8BIM" + _IPTC_RESOURCE.to_bytes(2, "big") + b"\0\0" + len(metadata.iptc).to_bytes(4, "big")
-        parts.append(_segment(0xED, b"Photoshop 3.0\0" + head + block))
-    return b"".join(parts)
-
-
-def _segment(marker: int, body: bytes) -> bytes:
-    return bytes([0xFF, marker]) + (len(body) + 2).to_bytes(2, "big") + body
-
-
-def png_chunks(metadata: Metadata) -> list[tuple[bytes, bytes]]:
-    """Return the chunks of a PNG that hold the metadata, as (type, data): eXIf, iTXt (XMP), zTXt (IPTC).
-
-    PNG has no chunk for IPTC; the text form "Raw profile type iptc" is what common libraries read.
-    """
-    chunks = []
-    if metadata.exif:
-        chunks.append((b"eXIf", metadata.exif))
-    if metadata.xmp:
-        chunks.append((b"iTXt", b"XML:com.adobe.xmp\0\0\0\0\0" + metadata.xmp))
-    if metadata.iptc:
-        chunks.append((b"zTXt", _hex_profile("iptc", metadata.iptc)))
-    return chunks
-
-
-def _hex_profile(name: str, data: bytes) -> bytes:
-    digits = data.hex()
-    lines = "\n".join(digits[i : i + 72] for i in range(0, len(digits), 72))
-    text = f"\n{name}\n{len(data):8}\n{lines}\n"
-    return f"Raw profile type {name}".encode() + b"\0\0" + zlib.compress(text.encode())
+    data = direct.data
+    if data[:1] != b"\x1c" and direct.type == 4:
+        data = b"".join(data[i : i + 4][::-1] for i in range(0, len(data), 4))
+    return data.rstrip(b"\0") if data[:1] == b"\x1c" else None

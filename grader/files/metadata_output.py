@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import io
 import struct
-from dataclasses import replace
 from typing import Final, Literal
 
 from grader.files import xmp
 from grader.files.metadata_build import tree_bytes
 from grader.files.metadata_facts import MAKE, MODEL, ORIENTATION, SOFTWARE
+from grader.files.metadata_segments import EXIF_ROOM, XMP_ROOM
 from grader.files.metadata_tree import (
     MAKER_NOTE,
     BrokenStructure,
@@ -29,11 +29,6 @@ _GEO_TAGS: Final = (0x830E, 0x8480, 0x8482, 0x85D8, 0x87AF, 0x87B0, 0x87B1, 0xC4
 """Tags that place a TIFF on a map (OGC GeoTIFF 1.1)."""
 _PLACE_DATASETS: Final = frozenset({26, 27, 90, 92, 95, 100, 101})
 """IPTC-IIM 4.2 record 2: content location, city, sublocation, state, country."""
-_SEGMENT_ROOM: Final = 65_533 - len(b"Exif\0\0")
-"""What a JPEG marker segment can hold of an Exif structure. [bytes]"""
-_XMP_ROOM: Final = 65_533 - len(b"http://ns.adobe.com/xap/1.0/\0")
-_IPTC_ROOM: Final = 65_533 - len(b"Photoshop 3.0\0") - 14
-
 _EXIF_VERSION, _COLOUR_SPACE, _WIDTH, _HEIGHT = 0x9000, 0xA001, 0xA002, 0xA003
 _SRGB, _UNCALIBRATED = 1, 65_535
 
@@ -73,8 +68,12 @@ def for_output(frame: Frame, kind: Kind, output: Output, correction: Correction 
     if correction is not None:
         packet.record(_record(frame, output, correction))
     iptc = _without_places(frame.metadata.iptc) if output.strip_location else frame.metadata.iptc
-    whole = Metadata(tree_bytes(tree), packet.to_bytes(), iptc, tuple(notes))
-    return _fit_jpeg(whole, tree) if kind == "jpeg" else whole
+    resources = frame.metadata.resources
+    if kind == "jpeg":
+        main, more = packet.split(XMP_ROOM)
+        exif = _fitting(tree, notes)
+        return Metadata(exif, main, iptc, resources, more, notes=tuple(notes))
+    return Metadata(tree_bytes(tree), packet.to_bytes(), iptc, resources, notes=tuple(notes))
 
 
 def software() -> str:
@@ -148,7 +147,8 @@ def _state(tree: Tree, frame: Frame) -> None:
 
 
 def _state_xmp(packet: xmp.Packet, frame: Frame) -> None:
-    """Keep XMP's copies of Exif values in step."""
+    """Keep XMP's copies of Exif values in step; an extension it may name is part of it by now."""
+    packet.drop_extension_name()
     height, width = frame.pixels.shape[:2]
     colour = _SRGB if frame.space.name == "sRGB" else _UNCALIBRATED
     for namespace, name, value in (
@@ -205,26 +205,16 @@ def _without_places(iptc: bytes | None) -> bytes | None:
     return b"".join(kept) or None
 
 
-def _fit_jpeg(metadata: Metadata, tree: Tree) -> Metadata:
-    """Leave out what a JPEG segment cannot hold: the maker note first, then the largest values."""
-    notes = list(metadata.notes)
-    exif, packet, iptc = metadata.exif, metadata.xmp, metadata.iptc
-    while exif is not None and len(exif) > _SEGMENT_ROOM:
+def _fitting(tree: Tree, notes: list[str]) -> bytes:
+    """Return Exif data that fit a JPEG segment: where they are too long, the maker note goes, then the largest values."""
+    exif = tree_bytes(tree)
+    while len(exif) > EXIF_ROOM:
         directory, tag = _largest(tree)
-        notes.append(
-            "the maker note is too large for a JPEG"
-            if tag == MAKER_NOTE
-            else f"metadata tag {tag:#x} is too large for a JPEG"
-        )
+        name = "the maker note" if tag == MAKER_NOTE else f"the metadata tag {tag:#06x}"
+        notes.append(f"{name} is too large for a JPEG and was left out")
         del directory[tag]
         exif = tree_bytes(tree)
-    if packet is not None and len(packet) > _XMP_ROOM:
-        notes.append("the XMP metadata are too large for a JPEG")
-        packet = None
-    if iptc is not None and len(iptc) > _IPTC_ROOM:
-        notes.append("the IPTC metadata are too large for a JPEG")
-        iptc = None
-    return replace(metadata, exif=exif, xmp=packet, iptc=iptc, notes=tuple(notes))
+    return exif
 
 
 def _largest(tree: Tree) -> tuple[dict[int, Field], int]:

@@ -52,7 +52,8 @@ _FORMATS: Final = {
     18: "u8",
 }
 MAX_DIRECTORIES: Final = 256
-"""More directories than any picture file has; the rest is not read. (judgement)"""
+MAX_ENTRIES: Final = 100_000
+"""More directories and entries than any picture file has; the rest is not read. (judgement)"""
 
 EXIF, GPS, INTEROP, SUB_IFDS = 0x8769, 0x8825, 0xA005, 0x014A
 MAKER_NOTE: Final = 0x927C
@@ -193,8 +194,8 @@ class Structure:
 
     def walk(self) -> Iterator[Places]:
         """Yield the directories of the chain and their sub-directories, each once; stop where one is broken."""
-        waiting, seen = [self.first], set[int]()
-        while waiting and len(seen) < MAX_DIRECTORIES:
+        waiting, seen, entries = [self.first], set[int](), 0
+        while waiting and len(seen) < MAX_DIRECTORIES and entries < MAX_ENTRIES:
             offset = waiting.pop(0)
             if offset == 0 or offset in seen:
                 continue
@@ -203,6 +204,7 @@ class Structure:
                 places, following = self.directory(offset)
             except BrokenStructure:
                 continue
+            entries += len(places)
             yield places
             if SUB_IFDS in places:
                 waiting += self.offsets(places[SUB_IFDS])

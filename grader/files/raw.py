@@ -76,7 +76,9 @@ def read(path: str | PathLike[str], limits: ReadLimits | None = None) -> Frame:
     bounds = limits or ReadLimits()
     with _opened(path, bounds) as raw:
         header, blobs, colour = _header(raw, path, bounds)
-        return _frame(header, blobs, _decoded(raw, colour))
+        pixels = _decoded(raw, colour)
+        header = replace(header, width_px=pixels.shape[1], height_px=pixels.shape[0])
+        return _frame(header, blobs, pixels)
 
 
 def read_header(path: str | PathLike[str], limits: ReadLimits | None = None) -> Header:
@@ -101,7 +103,7 @@ def read_reduced(path: str | PathLike[str], limits: ReadLimits | None = None, ta
     path : path-like
     limits : ReadLimits, optional
     target_px : int
-        The longer side comes out between this and twice this, or larger where the file leaves no other way.
+        The longer side comes out at about this, the shorter at most at two thirds of it.
 
     Raises
     ------
@@ -263,7 +265,7 @@ def _preview_facts(raw: Any, limits: ReadLimits) -> tuple[metadata.Facts, Metada
         if preview.format != rawpy.ThumbFormat.JPEG or len(preview.data) > limits.max_metadata_bytes:
             return {}, Metadata()
         with PIL.Image.open(io.BytesIO(preview.data)) as image:
-            return metadata.from_jpeg_info(image.info, limits)
+            return metadata.from_jpeg_info(image.info, limits, getattr(image, "applist", ()))
     except (rawpy.LibRawError, NotImplementedError, OSError, ValueError, SyntaxError, RuntimeError):
         return {}, Metadata()
 

@@ -27,7 +27,7 @@ def reduce_mosaic(raw: Any, colour: RawColour, target_px: int) -> NDArray[np.uin
     colour : RawColour
         Needs a matrix.
     target_px : int
-        The longer side comes out between this and twice this, as far as the file has it.
+        The longer side comes out at about this, the shorter at most at two thirds of it.
 
     Returns
     -------
@@ -39,7 +39,7 @@ def reduce_mosaic(raw: Any, colour: RawColour, target_px: int) -> NDArray[np.uin
         return None
     mosaic = raw.raw_image_visible
     period = pattern.shape[0]
-    cell = max(max(mosaic.shape) // (period * target_px), 1) * period
+    cell = _cell_px(mosaic.shape, period, target_px)
     if set(range(colour.colours)) - set(np.unique(pattern)) or min(mosaic.shape) < cell:
         return None
     black = np.asarray(raw.black_level_per_channel, np.int64)
@@ -59,6 +59,12 @@ def reduce_mosaic(raw: Any, colour: RawColour, target_px: int) -> NDArray[np.uin
         working = np.einsum("yxc,dc->yxd", mean, colour.working_from_balanced)
     working[used < (1 - _CLIPPED_SHARE) * (cell // period) ** 2] = 1.0
     return np.asarray(np.rint(np.clip(working, 0, 1) * _TOP), np.uint16)
+
+
+def _cell_px(shape: tuple[int, ...], period: int, target_px: int) -> int:
+    """Return a cell's width and height: whole periods, so that the picture fits target_px by two thirds of it."""
+    long, short = max(shape), min(shape)
+    return max(-(-long // (target_px * period)), -(-3 * short // (2 * target_px * period)), 1) * period
 
 
 @jit

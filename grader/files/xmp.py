@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import xml.dom.minidom
 from collections.abc import Iterator, Mapping
 from typing import Any, Final
@@ -13,6 +14,7 @@ TIFF: Final = "http://ns.adobe.com/tiff/1.0/"
 EXIF: Final = "http://ns.adobe.com/exif/1.0/"
 BASIC: Final = "http://ns.adobe.com/xap/1.0/"
 PHOTOSHOP: Final = "http://ns.adobe.com/photoshop/1.0/"
+NOTE: Final = "http://ns.adobe.com/xmp/note/"
 IPTC_CORE: Final = "http://iptc.org/std/Iptc4xmpCore/1.0/xmlns/"
 IPTC_EXT: Final = "http://iptc.org/std/Iptc4xmpExt/2008-02-29/"
 _XMLNS: Final = "http://www.w3.org/2000/xmlns/"
@@ -22,6 +24,8 @@ GRADER: Final = "https://grader.invalid/ns/correction/1/"
 _HEAD: Final = b'<?xpacket begin="\xef\xbb\xbf" id="W5M0MpCehiHzreSzNTczkc9d"?>\n'
 _TAIL: Final = b'\n<?xpacket end="w"?>'
 _EMPTY: Final = f'<x:xmpmeta xmlns:x="{META}"><rdf:RDF xmlns:rdf="{RDF}"/></x:xmpmeta>'
+_NAME_BYTES: Final = 300
+"""At least what the description takes that names an extension. [bytes]"""
 _MAX_DEPTH: Final = 100
 _MAX_ELEMENTS: Final = 200_000
 
@@ -108,14 +112,67 @@ class Packet:
         """Write properties of our own namespace, in place of those of an earlier run."""
         for description in list(self._descriptions()):
             _drop_namespace(description, GRADER)
-        own = self._document.createElementNS(RDF, self._prefixed("Description"))
-        own.setAttributeNS(RDF, self._prefixed("about"), self._about())
+        own = self._new_description(self._about())
         own.setAttributeNS(_XMLNS, "xmlns:grader", GRADER)
-        if not self._rdf.prefix:
-            own.setAttributeNS(_XMLNS, "xmlns:rdf", RDF)
         for name, value in values.items():
             own.setAttributeNS(GRADER, f"grader:{name}", value)
-        self._rdf.appendChild(own)
+
+    def join(self, extension: bytes) -> None:
+        """Take up the properties of an extension packet.
+
+        Raises
+        ------
+        BrokenPacket
+            The extension cannot be parsed.
+        """
+        other = Packet(extension)
+        for description in list(other._descriptions()):
+            copy = self._document.importNode(description, True)
+            _declare(copy, _scope(description))
+            self._rdf.appendChild(copy)
+        self.drop_extension_name()
+
+    def split(self, room: int) -> tuple[bytes, bytes | None]:
+        """Return the packet and, where it is longer than ``room``, an extension that took its largest properties."""
+        whole = self.to_bytes()
+        if len(whole) <= room:
+            return whole, None
+        extension = Packet()
+        home = extension._new_description(self._about())
+        left = len(whole) + _NAME_BYTES
+        for size, node in self._by_size():
+            if left <= room:
+                break
+            _move(node, home)
+            left -= size
+        more = _markup(extension._document.documentElement).encode("utf-8")
+        note = self._new_description(self._about())
+        note.setAttributeNS(_XMLNS, "xmlns:xmpNote", NOTE)
+        note.setAttributeNS(NOTE, "xmpNote:HasExtendedXMP", extension_digest(more).decode())
+        return self.to_bytes(), more
+
+    def drop_extension_name(self) -> None:
+        """Remove the name of an extension packet."""
+        for description in list(self._descriptions()):
+            _drop_namespace(description, NOTE)
+
+    def _by_size(self) -> list[tuple[int, _Node]]:
+        """Return the properties, the largest first; our own stay."""
+        found = []
+        for description in self._descriptions():
+            found += [(len(_markup(e).encode()), e) for e in _elements(description)]
+            found += [
+                (len(a.value.encode()), a) for a in _attributes(description) if a.namespaceURI != GRADER
+            ]
+        return sorted(found, key=lambda pair: -pair[0])
+
+    def _new_description(self, about: str) -> _Node:
+        prefix = self._rdf.prefix or "rdf"
+        new = self._document.createElementNS(RDF, f"{prefix}:Description")
+        new.setAttributeNS(RDF, f"{prefix}:about", about)
+        if not self._rdf.prefix:
+            new.setAttributeNS(_XMLNS, "xmlns:rdf", RDF)
+        return self._rdf.appendChild(new)
 
     def to_bytes(self) -> bytes:
         """Return the packet with its wrapper, in UTF-8."""
@@ -129,10 +186,6 @@ class Packet:
         for element in _elements(self._rdf):
             if (element.namespaceURI, element.localName) == (RDF, "Description"):
                 yield element
-
-    def _prefixed(self, name: str) -> str:
-        prefix = self._rdf.prefix
-        return f"{prefix}:{name}" if prefix else f"rdf:{name}"
 
     def _about(self) -> str:
         """Return the resource that the packet is about: all descriptions must name the same one."""
@@ -204,12 +257,54 @@ def _tells_place(namespace: str | None, name: str | None) -> bool:
 
 
 def _drop_namespace(description: _Node, namespace: str) -> None:
-    for attribute in list(description.attributes.values()):
-        if attribute.namespaceURI == namespace:
-            description.removeAttributeNode(attribute)
-    for child in list(_elements(description)):
-        if child.namespaceURI == namespace:
-            description.removeChild(child)
-    plain = [a for a in description.attributes.values() if a.namespaceURI not in (RDF, _XMLNS)]
-    if not plain and not list(_elements(description)) and description.parentNode is not None:
+    """Remove a namespace's properties from a description, and the description where nothing is left of it."""
+    gone = [a for a in _attributes(description) if a.namespaceURI == namespace]
+    for attribute in gone:
+        description.removeAttributeNode(attribute)
+    for child in [c for c in _elements(description) if c.namespaceURI == namespace]:
+        description.removeChild(child)
+    if not _attributes(description) and not list(_elements(description)):
         description.parentNode.removeChild(description)
+
+
+def _attributes(description: _Node) -> list[_Node]:
+    """Return the attributes that are properties."""
+    return [a for a in description.attributes.values() if a.namespaceURI not in (RDF, _XMLNS)]
+
+
+def _move(node: _Node, home: _Node) -> None:
+    """Move a property, an element or an attribute, into another packet's description."""
+    document = home.ownerDocument
+    if node.nodeType == node.ATTRIBUTE_NODE:
+        owner = node.ownerElement
+        copy = document.createElementNS(node.namespaceURI, node.name)
+        copy.appendChild(document.createTextNode(node.value))
+        _declare(copy, _scope(owner))
+        owner.removeAttributeNode(node)
+    else:
+        copy = document.importNode(node, True)
+        _declare(copy, _scope(node))
+        node.parentNode.removeChild(node)
+    home.appendChild(copy)
+
+
+def _scope(node: _Node) -> dict[str, str]:
+    """Return the namespace declarations that hold at a node, the nearest winning."""
+    found: dict[str, str] = {}
+    while node is not None and node.nodeType == node.ELEMENT_NODE:
+        for attribute in node.attributes.values():
+            if attribute.namespaceURI == _XMLNS:
+                found.setdefault(attribute.name, attribute.value)
+        node = node.parentNode
+    return found
+
+
+def _declare(element: _Node, declarations: Mapping[str, str]) -> None:
+    for name, value in declarations.items():
+        if not element.hasAttribute(name):
+            element.setAttributeNS(_XMLNS, name, value)
+
+
+def extension_digest(extension: bytes) -> bytes:
+    """Return the name of an extension packet: the MD5 digest of its bytes, in capitals (ISO 16684-1's part 3)."""
+    return hashlib.md5(extension, usedforsecurity=False).hexdigest().upper().encode()

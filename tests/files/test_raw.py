@@ -127,16 +127,16 @@ def test_multipliers_make_a_light_neutral_in_libraw(sensor_file, tmp_path, kind)
 @pytest.mark.parametrize("kind", [*KINDS, "grey"])
 def test_the_reduced_frame_agrees_with_the_whole_one(sensor_file, tmp_path, kind):
     rng = np.random.default_rng(5)
-    blocks = rng.uniform(0.1, 0.8, (12, 16, 3)) * [1.1, 1.0, 0.9]
+    blocks = rng.uniform(0.1, 0.8, (6, 8, 3)) * [1.1, 1.0, 0.9]
     soft = 0.6 * blocks.mean(axis=2, keepdims=True) + 0.4 * blocks
-    picture = AS_SHOT * np.kron(soft, np.ones((36, 36, 1)))
+    picture = AS_SHOT * np.kron(soft, np.ones((72, 72, 1)))
     path = sensor_file(tmp_path / "a.dng", picture, kind=kind)
     whole, small = raw.read(path), raw.read_reduced(path, target_px=96)
-    assert 64 <= max(small.pixels.shape) <= 192
+    assert 48 <= max(small.pixels.shape) <= 96
     ratio = small.pixels.reshape(-1, 3).mean(axis=0) / whole.pixels.reshape(-1, 3).mean(axis=0)
     np.testing.assert_allclose(ratio, 1, atol=5e-3)
-    for i in range(16):
-        np.testing.assert_allclose(middle(small.pixels, i, 16), middle(whole.pixels, i, 16), rtol=0.02)
+    for i in range(8):
+        np.testing.assert_allclose(middle(small.pixels, i, 8), middle(whole.pixels, i, 8), rtol=5e-3)
     assert small.header.width_px == whole.header.width_px == 576
     assert small.header.sha256 == whole.header.sha256
 
