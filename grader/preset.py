@@ -24,6 +24,8 @@ from grader.model import Fixed, Output, Recipe
 MAX_BYTES: Final = 65_536
 """A preset is about one kilobyte; what is larger is something else."""
 
+_AIM_OF_A_RECIPE: Final = ("toward", "keep_yellow_blue", "keep_green_magenta")
+
 Kind = Literal["recipe", "fixed"]
 Settings = TypeVar("Settings", Recipe, Fixed)
 
@@ -166,7 +168,18 @@ def recipe_with(recipe: Recipe, **overrides: Any) -> Recipe:
 
 
 def fixed_with(fixed: Fixed, **overrides: Any) -> Fixed:
-    """Return a fixed correction with some settings replaced, checked; as ``recipe_with``."""
+    """Return a fixed correction with some settings replaced, checked; as ``recipe_with``.
+
+    Raises
+    ------
+    PresetError
+        A name is unknown, a value out of bounds, or the aim would change: what is kept of the cast is in
+        ``toward_xy`` already.
+    """
+    aims = [key for key in _AIM_OF_A_RECIPE if overrides.get(key) is not None]
+    if aims:
+        hint = f"measure it again with another {aims[0]}, or use a recipe"
+        raise PresetError(f"{aims[0]!r} cannot be changed in a fixed correction", hint=hint)
     return _with(fixed, overrides)
 
 

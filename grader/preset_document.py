@@ -190,9 +190,9 @@ class FixedDocument(_Strict):
     degree: Share = 1.0
     """Degree of adaptation, 0 (nothing is done) to 1 (complete)."""
     keep_yellow_blue: Share = 0.0
-    """Share of the yellow-blue cast to leave in."""
+    """Share of the yellow-blue cast that toward_xy leaves in; for the record."""
     keep_green_magenta: Share = 0.0
-    """Share of the green-magenta cast to leave in."""
+    """Share of the green-magenta cast that toward_xy leaves in; for the record."""
     output: OutputDocument = OutputDocument()
     measured_on_body: Annotated[str, Field(max_length=200)] = ""
     """Camera body: make, model and serial number as the metadata give them."""

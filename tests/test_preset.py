@@ -254,6 +254,14 @@ def test_overrides_are_checked(override, words):
         preset.recipe_with(Recipe(), **override)
 
 
+@pytest.mark.parametrize(
+    "override", [{"keep_yellow_blue": 0.5}, {"keep_green_magenta": 0.0}, {"toward": "5000"}]
+)
+def test_the_aim_of_a_fixed_correction_is_fixed(override):
+    with pytest.raises(PresetError, match="cannot be changed in a fixed correction"):
+        preset.fixed_with(Fixed((0.4, 0.4), (0.3, 0.3)), **override)
+
+
 # --- what is refused
 
 
