@@ -37,6 +37,14 @@ def middle(pixels, i, of):
     return pixels[height // 4 : 3 * height // 4, x0:x1].reshape(-1, 3).mean(axis=0) / 65_535
 
 
+def centres(pixels):
+    """Return the mean colours of the middles of 6 x 8 blocks."""
+    row, column = pixels.shape[0] / 6, pixels.shape[1] / 8
+    inner = [slice(int((i + 0.35) * row), int((i + 0.65) * row)) for i in range(6)]
+    across = [slice(int((i + 0.35) * column), int((i + 0.65) * column)) for i in range(8)]
+    return np.array([[pixels[y, x].reshape(-1, 3).mean(axis=0) for x in across] for y in inner])
+
+
 @pytest.mark.parametrize("kind", KINDS)
 @pytest.mark.parametrize("byteorder", ["<", ">"])
 def test_a_neutral_of_the_shot_is_grey_in_every_kind(sensor_file, tmp_path, kind, byteorder):
@@ -135,8 +143,7 @@ def test_the_reduced_frame_agrees_with_the_whole_one(sensor_file, tmp_path, kind
     assert 48 <= max(small.pixels.shape) <= 96
     ratio = small.pixels.reshape(-1, 3).mean(axis=0) / whole.pixels.reshape(-1, 3).mean(axis=0)
     np.testing.assert_allclose(ratio, 1, atol=5e-3)
-    for i in range(8):
-        np.testing.assert_allclose(middle(small.pixels, i, 8), middle(whole.pixels, i, 8), rtol=5e-3)
+    np.testing.assert_allclose(centres(small.pixels), centres(whole.pixels), rtol=2e-3)
     assert small.header.width_px == whole.header.width_px == 576
     assert small.header.sha256 == whole.header.sha256
 
