@@ -56,6 +56,7 @@ EYE_FLAGS: Final = frozenset(
         "matrix-missing",
         "nothing-measured",
         "other-body",
+        "other-kind",
     }
 )
 """Flags that ask a person to look at the frame."""

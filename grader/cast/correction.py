@@ -116,7 +116,8 @@ def fixed_correction(fixed: Fixed, header: Header) -> Correction:
 
     ``fixed.toward_xy`` is taken as where a neutral goes; what it keeps of the cast is in it already
     (``keep_yellow_blue`` and ``keep_green_magenta`` are carried along for the record).  A frame of
-    another body than the one that was measured is flagged.
+    another body than the one that was measured is flagged, and so is one of another kind: a raw file's light
+    is absolute, a developed file's is relative to the balance in it.
 
     Examples
     --------
@@ -124,7 +125,11 @@ def fixed_correction(fixed: Fixed, header: Header) -> Correction:
     >>> fixed_correction(lamp, Header(body="Northlight N1 9")).flags
     ('other-body',)
     """
-    other = bool(fixed.measured_on_body) and fixed.measured_on_body != header.body
+    flags = []
+    if fixed.measured_on_body and fixed.measured_on_body != header.body:
+        flags.append("other-body")
+    if fixed.measured_referred and fixed.measured_referred != header.referred:
+        flags.append("other-kind")
     shift_mired, shift_duv = cancelling_shift(fixed.from_xy, fixed.toward_xy)
     return Correction(
         from_xy=fixed.from_xy,
@@ -138,7 +143,7 @@ def fixed_correction(fixed: Fixed, header: Header) -> Correction:
         shift_duv=shift_duv,
         doubt_deg=fixed.measured_doubt_deg,
         reason="fixed by the preset",
-        flags=("other-body",) if other else (),
+        flags=tuple(flags),
     )
 
 

@@ -305,3 +305,9 @@ def test_fixed_correction_keeps_what_the_recipe_keeps():
     half = fixed_from_sample(sample, Recipe(keep_yellow_blue=0.5))
     assert D65_XY[0] < half.toward_xy[0] < 0.44
     assert fixed_from_sample(sample, Recipe(toward="0.3457,0.3585")).toward_xy == (0.3457, 0.3585)
+
+
+def test_a_correction_measured_on_raw_is_flagged_on_developed_files():
+    fixed = fixed_from_sample(PatchSample((0.44, 0.40), 0.5), Recipe(), Header(referred="scene"))
+    assert fixed_correction(fixed, Header(referred="display")).flags == ("other-kind",)
+    assert fixed_correction(fixed, Header(referred="scene")).flags == ()
