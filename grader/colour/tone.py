@@ -52,9 +52,8 @@ def apply(linear: ArrayLike) -> NDArray[np.float64]:
     [0.0, 0.18, 1.0]
     """
     x = np.asarray(linear, np.float64)
-    power = np.abs(x) ** CONTRAST
-    with np.errstate(invalid="ignore"):
-        y = np.where(np.isinf(power), 1 + _S, (1 + _S) * power / (power + _S))
+    with np.errstate(divide="ignore", over="ignore"):  # 0 and infinity have their limits
+        y = (1 + _S) / (1 + _S * np.abs(x) ** -CONTRAST)
     return np.copysign(y, x)
 
 

@@ -67,7 +67,8 @@ def read(path: str | PathLike[str], limits: ReadLimits | None = None) -> Frame:
     -------
     Frame
         ``header.daylight_from_decoded`` undoes the balance of the shot; flags tell where it, or the camera's
-        matrix, could not be used.
+        matrix, could not be used.  Without a matrix the light's chromaticity is not known, only how far it is from
+        the balance of the shot: such a frame is display-referred.
 
     Raises
     ------
@@ -78,7 +79,7 @@ def read(path: str | PathLike[str], limits: ReadLimits | None = None) -> Frame:
         header, blobs, colour = _header(raw, path, bounds)
         pixels = _decoded(raw, colour)
         header = replace(header, width_px=pixels.shape[1], height_px=pixels.shape[0])
-        return _frame(header, blobs, pixels)
+        return _frame(header, blobs, pixels, grey=colour.colours == 1)
 
 
 def read_header(path: str | PathLike[str], limits: ReadLimits | None = None) -> Header:
@@ -209,7 +210,7 @@ def _header(raw: Any, path: str | PathLike[str], limits: ReadLimits) -> tuple[He
         format="raw",
         width_px=sizes.width,
         height_px=sizes.height,
-        referred="scene",
+        referred="display" if colour.daylight_from_balanced is None else "scene",
         daylight_from_decoded=daylight_from_decoded(colour),
         sensor=sensor_of(colour),
         sha256=digest,
@@ -234,7 +235,7 @@ def _judged_colour(raw: Any, colour: RawColour) -> tuple[list[str], list[str]]:
     return flags, notes
 
 
-def _frame(header: Header, blobs: Metadata, pixels: NDArray[np.uint16]) -> Frame:
+def _frame(header: Header, blobs: Metadata, pixels: NDArray[np.uint16], *, grey: bool = False) -> Frame:
     """Return the frame, flagged where the decode is all black or all white."""
     small = pixels[:: max(pixels.shape[0] // 400, 1), :: max(pixels.shape[1] // 400, 1)]
     found = []
@@ -245,7 +246,8 @@ def _frame(header: Header, blobs: Metadata, pixels: NDArray[np.uint16]) -> Frame
     if found:
         flags, notes = zip(*found, strict=True)
         header = replace(header, flags=(*header.flags, *flags), notes=(*header.notes, *notes))
-    return Frame(pixels, SPACES["linear Rec.2020"], header, blobs)
+    encoding = {"kind": "grey"} if grey else {}
+    return Frame(pixels, SPACES["linear Rec.2020"], header, blobs, encoding=encoding)
 
 
 def _facts(raw: Any, path: str | PathLike[str], limits: ReadLimits) -> tuple[metadata.Facts, Metadata]:

@@ -206,6 +206,7 @@ def test_a_missing_matrix_is_flagged_and_neutrals_stay_neutral(sensor_file, tmp_
         path = sensor_file(tmp_path / "a.dng", patches(0.2, 0.5), matrix=matrix)
         for frame in (raw.read(path), raw.read_reduced(path, target_px=60)):
             assert "matrix-missing" in frame.header.flags
+            assert frame.header.referred == "display"  # the light's own chromaticity cannot be known
             assert frame.header.sensor is None
             assert raw.sensor_multipliers(frame.header, D65_XY) is None
             colour = middle(frame.pixels, 0, 2)
