@@ -196,17 +196,18 @@ def _ramp(value: Any, ends: Any) -> Any:
 def _keep_highlights(planes: Any, count: int, steps: Steps) -> None:
     s0, s1, s2 = steps.source_luminance
     l0, l1, l2 = steps.luminance
-    clip, colour, one_clipped, two_clipped = steps.clip, steps.colour, steps.one_clipped, steps.two_clipped
+    clip, one_clipped, two_clipped = steps.clip, steps.one_clipped, steps.two_clipped
     for i in range(count):
         red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         x, y, z = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
         wanted = s0 * x + s1 * y + s2 * z
         of_x, of_y, of_z = _ramp(x, clip), _ramp(y, clip), _ramp(z, clip)
-        low, high = min(red, green, blue), max(red, green, blue)
+        high = max(red, green, blue)
+        red_or_more, green_or_more = red + of_x * (high - red), green + of_y * (high - green)
+        blue_or_more = blue + of_z * (high - blue)
+        level = min(red_or_more, blue_or_more)
+        maybe = _ramp(min(level, green_or_more) / (high + _TINY), steps.colour)
         per_largest = _ONE / (max(x, y, z) + _TINY)
-        likeness = max(min(x, y, z) * per_largest, low / (high + _TINY))
-        maybe = _ramp(likeness, colour)
-        level = min(red + of_x * (high - red), blue + of_z * (high - blue))
         level = max(level, of_x * red, of_z * blue)
         green = green + maybe * of_y * max(level * (y * per_largest) - green, _ZERO)
         red = red + maybe * of_x * max(green * (x * per_largest) - red, _ZERO)
@@ -216,6 +217,7 @@ def _keep_highlights(planes: Any, count: int, steps: Steps) -> None:
         scale = _ONE + most * (wanted / max(l0 * red + l1 * green + l2 * blue, _TINY) - _ONE)
         greyness = min(red, green, blue) / (max(red, green, blue) + _TINY)
         grey = max(most * _ramp(greyness, one_clipped), second * _ramp(greyness, two_clipped))
+        grey = grey * steps.strength
         planes[i] = scale * red + grey * (wanted - scale * red)
         planes[_PLANE + i] = scale * green + grey * (wanted - scale * green)
         planes[2 * _PLANE + i] = scale * blue + grey * (wanted - scale * blue)

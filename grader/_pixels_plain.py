@@ -36,11 +36,13 @@ def keep_highlights(source: Light, light: Light, steps: Steps) -> Light:
     A clipped channel was at least what it is now.  Three things follow, all of them growing smoothly with how near
     to clipping the channels are:
 
-    1. A clipped channel is lifted to the level of the unclipped ones, if all of them are higher after correction,
-       and clipped neighbours are levelled with each other as they were in the file (red and blue only by way of
-       green: together without green they are a magenta lamp, not a white one).  Not for saturated colours.
+    1. Green, if clipped, is lifted to the unclipped ones of red and blue where both are higher after the correction,
+       and to the clipped ones of them; red and blue, if clipped, are lifted to green.  (They meet by way of green
+       only: red and blue clipped without green are a magenta lamp, not a white one.)  No channel is lifted above
+       its share in the file.  Colours that are saturated whatever the clipped channels were stay as they are.
     2. Luminance goes back to what the file had.
-    3. What is nearly grey by now becomes grey, the more so if a second channel is clipped.
+    3. What is nearly grey by now becomes grey, the more so if a second channel is clipped, and the less so the less
+       the correction does to white.
 
     Parameters
     ----------
@@ -61,18 +63,17 @@ def keep_highlights(source: Light, light: Light, steps: Steps) -> Light:
     scaled = lifted * (1 + most * (wanted / found - 1))[:, None]
     greyness = lifted.min(1) / (lifted.max(1) + _TINY)
     grey = np.maximum(most * ramp(greyness, steps.one_clipped), second * ramp(greyness, steps.two_clipped))
+    grey *= float(steps.strength)
     return np.asarray(scaled + grey[:, None] * (wanted[:, None] - scaled))
 
 
 def _lifted(source: Light, light: Light, clipped: Light, steps: Steps) -> Light:
     largest = light.max(1)
-    (red, green, blue), (of_red, of_green, of_blue) = light.T, clipped.T
+    or_more = light + clipped * (largest[:, None] - light)
+    likeness = or_more.min(1) / (largest + _TINY)
     share = source / (source.max(1, keepdims=True) + _TINY)
-    likeness = np.maximum(share.min(1), light.min(1) / (largest + _TINY))
-    of_red, of_green, of_blue = ramp(likeness, steps.colour) * clipped.T
-    red_or_more = red + clipped[:, 0] * (largest - red)
-    blue_or_more = blue + clipped[:, 2] * (largest - blue)
-    level = np.maximum(np.minimum(red_or_more, blue_or_more), (clipped * light)[:, ::2].max(1))
+    (red, green, blue), (of_red, of_green, of_blue) = light.T, ramp(likeness, steps.colour) * clipped.T
+    level = np.maximum(or_more[:, ::2].min(1), (clipped * light)[:, ::2].max(1))
     green = green + of_green * np.maximum(level * share[:, 1] - green, 0.0)
     red = red + of_red * np.maximum(green * share[:, 0] - red, 0.0)
     blue = blue + of_blue * np.maximum(green * share[:, 2] - blue, 0.0)

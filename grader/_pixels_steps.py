@@ -14,12 +14,15 @@ from grader.model import Correction, Frame, Matrix, Output, Space
 CLIP_RAMP: Final = (0.75, 0.96)
 """Linear light, as a share of the file's white, over which a channel counts more and more as clipped: blown areas of
 JPEGs ripple down to about the upper one (common practice), and shoulders of cameras' curves begin near the lower."""
-COLOUR_RAMP: Final = (0.05, 0.30)
-"""Smallest over largest channel: below, a clipped pixel is a coloured lamp; above, it may have been white."""
+COLOUR_RAMP: Final = (0.10, 0.35)
+"""Smallest over largest channel after the correction, clipped channels counted as large as the largest: below, a
+clipped pixel is a coloured lamp; above, it may have been white."""
 ONE_CLIPPED_RAMP: Final = (0.50, 0.85)
 """The same ratio after correction, over which a pixel with one clipped channel turns into white."""
 TWO_CLIPPED_RAMP: Final = (0.10, 0.70)
 """And with two clipped channels, which tell less of a colour."""
+STRENGTH_RAMP: Final = (0.0, 0.15)
+"""How far the correction moves white (1 - smallest over largest channel) for the greying to be whole."""
 _NO_CLIPPING: Final = (2.0**100, 2.0**101)
 _NO_CHANGE: Final = 1e-9
 """A matrix this near to the identity moves no 16-bit code."""
@@ -39,6 +42,8 @@ class Steps(NamedTuple):
     colour: tuple[Any, Any]
     one_clipped: tuple[Any, Any]
     two_clipped: tuple[Any, Any]
+    strength: Any
+    """Of the greying near white: 0 for a correction that leaves white as it is, 1 for a large one."""
     bounded: bool
     """Pull colours into the output's gamut and clip: integer output."""
     code_white: Any
@@ -71,14 +76,16 @@ def prepare(frame: Frame, correction: Correction, output: Output, target: Space)
     floating = kind.kind == "f"
     levels = 0 if floating else int(np.iinfo(kind).max) + 1
     gain = 2.0**output.exposure_ev
+    matrix = gain * out_from_in(frame.space, correction.matrix, target)
     steps = Steps(
-        matrix=_numbers(gain * out_from_in(frame.space, correction.matrix, target)),
+        matrix=_numbers(matrix),
         source_luminance=_numbers(gain * luminance_of(frame.space)),
         luminance=_numbers(luminance_of(target)),
         clip=_numbers(_NO_CLIPPING if floating and not clipped_at_white(frame) else CLIP_RAMP),
         colour=_numbers(COLOUR_RAMP),
         one_clipped=_numbers(ONE_CLIPPED_RAMP),
         two_clipped=_numbers(TWO_CLIPPED_RAMP),
+        strength=np.float32(_strength(matrix)),
         bounded=not floating,
         code_white=np.float32(1 if floating else levels - 1),
     )
@@ -87,6 +94,13 @@ def prepare(frame: Frame, correction: Correction, output: Output, target: Space)
         steps,
         fitted.encoder(target.curves, toned=toned(frame, output), floating=floating),
     )
+
+
+def _strength(matrix: NDArray[np.float64]) -> float:
+    white = matrix.sum(axis=1)
+    moved = 1 - white.min() / white.max()
+    share = min(max((moved - STRENGTH_RAMP[0]) / (STRENGTH_RAMP[1] - STRENGTH_RAMP[0]), 0.0), 1.0)
+    return float(share * share * (3 - 2 * share))
 
 
 def toned(frame: Frame, output: Output) -> bool:

@@ -90,12 +90,17 @@ def correct(
 
 
 def correct_frame(frame: Frame, correction: Correction, output: Output | None = None) -> Frame:
-    """Return the graded frame; see `correct`, which also counts what was clipped."""
+    """Return the graded frame in its output space: `correct` without the counts."""
     return correct(frame, correction, output)[0]
 
 
 def _native(pixels: NDArray[Any]) -> NDArray[Any]:
-    return np.ascontiguousarray(pixels, dtype=pixels.dtype.newbyteorder("="))
+    native = pixels.dtype.newbyteorder("=")
+    return (
+        pixels
+        if pixels.flags.c_contiguous and pixels.dtype == native
+        else np.ascontiguousarray(pixels, native)
+    )
 
 
 def _may_overwrite(frame: Frame, pixels: NDArray[Any], overwrite: bool) -> bool:
