@@ -23,11 +23,13 @@ Completion: `eval "$(_GRADER_COMPLETE=bash_source grader)"` (or `zsh_source`); f
 
 def document() -> str:
     """Return the whole page."""
-    parent = click.Context(cli.grader, info_name="grader", max_content_width=100, terminal_width=100)
+    parent = click.Context(
+        cli.grader, info_name="grader", help_option_names=["-h", "--help"], terminal_width=100
+    )
     parts = [HEAD]
     for name in cli.grader.list_commands(parent):
         command = cli.grader.get_command(parent, name)
-        context = click.Context(command, info_name=name, parent=parent, max_content_width=100, terminal_width=100)
+        context = click.Context(command, info_name=name, parent=parent, terminal_width=100)
         parts.append(f"\n## grader {name}\n\n```text\n{command.get_help(context)}\n```\n")
     return "".join(parts)
 

@@ -15,7 +15,16 @@ from grader import cast as casts
 from grader import files, jobs
 from grader.colour.difference import grey_delta_e_2000
 from grader.errors import GraderError, PresetError, WriteFailed
-from grader.log import Line, Log, cast_from_line, correction_from_line, graded_line, measured_line, planned_line, run_line
+from grader.log import (
+    Line,
+    Log,
+    cast_from_line,
+    correction_from_line,
+    graded_line,
+    measured_line,
+    planned_line,
+    run_line,
+)
 from grader.model import Cast, Correction, Fixed, ReadLimits, Recipe
 from grader.preset import Preset, make_preset
 from grader.run import Run, now, open_earlier
@@ -140,6 +149,9 @@ class Batch:
         self._progress = progress or (lambda _stage, _done, _total: None)
         self.preset = _resolved(preset, self.options.limits)
         self.settings = self.preset.settings
+        paths = list(paths)
+        if self.out is not None:
+            check_target_folder(paths, self.out)
         self.sources, self.missing = find_sources(
             paths, recurse=self.options.recurse, leave_out=[] if self.out is None else [self.out]
         )
@@ -350,7 +362,6 @@ class Batch:
     def _name_targets(self) -> dict[str, PurePath]:
         if self.out is None:
             return {}
-        check_target_folder(self.sources, self.out)
         suffixes = [_suffix(source, self.settings.output.format) for source in self.sources]
         return {s.path: t for s, t in zip(self.sources, name_targets(self.sources, suffixes), strict=True)}
 

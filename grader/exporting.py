@@ -56,7 +56,13 @@ def export_preset(
         )
     correction = casts.fixed_correction(preset.settings, Header())
     yield from _write_pair(
-        correction, _folder(out), preset.name, space, preset.description, preset.settings.output.exposure_ev, overwrite
+        correction,
+        _folder(out),
+        preset.name,
+        space,
+        preset.description,
+        preset.settings.output.exposure_ev,
+        overwrite,
     )
 
 
@@ -71,7 +77,9 @@ def export_log(
     """
     lines = [line for line in read_log(log).latest() if line.get("correction")]
     if not lines:
-        raise DamagedFile("there is no correction in this log", path=log, hint="run grader measure or neutralise first")
+        raise DamagedFile(
+            "there is no correction in this log", path=log, hint="run grader measure or neutralise first"
+        )
     folder = _folder(out)
     stretches: dict[str, list[Mapping[str, Any]]] = {}
     for line in lines:
@@ -80,18 +88,23 @@ def export_log(
     for stretch, members in stretches.items():
         middle = members[len(members) // 2]
         text = f"Stretch {stretch}: {len(members)} frames, the correction of {Path(middle['file']).name}."
-        yield from _write_pair(correction_from_line(middle), folder, f"stretch-{stretch}", space, text, 0.0, overwrite)
-    frames = [
-        {"file": line["file"], "stretch": line.get("stretch"), **line["correction"]}
-        for line in lines
-    ]
+        yield from _write_pair(
+            correction_from_line(middle), folder, f"stretch-{stretch}", space, text, 0.0, overwrite
+        )
+    frames = [{"file": line["file"], "stretch": line.get("stretch"), **line["correction"]} for line in lines]
     target = folder / "frames.json"
     write_atomic(target, (json.dumps({"frames": frames}, indent=1) + "\n").encode(), overwrite=overwrite)
     yield {"file": str(target), "kind": "json", "frames": len(frames)}
 
 
-def _write_pair(  # noqa: PLR0913, PLR0917 - one place for both files
-    correction: Correction, folder: Path, name: str, space: str, text: str, exposure_ev: float, overwrite: bool  # noqa: FBT001
+def _write_pair(
+    correction: Correction,
+    folder: Path,
+    name: str,
+    space: str,
+    text: str,
+    exposure_ev: float,
+    overwrite: bool,
 ) -> Iterator[Written]:
     stem = re.sub(r"[^\w.-]+", "-", name).strip(".-") or "correction"
     look = folder / f"{stem}.clf"

@@ -11,6 +11,7 @@ import numpy as np
 
 from grader import cast as casts
 from grader import files
+from grader.cast.box import parse_box, stored_box
 from grader.colour.white import linear_from_xy, xy_from_linear
 from grader.errors import MissingFile, PresetError
 from grader.model import XY, Fixed, ReadLimits, Recipe
@@ -45,7 +46,8 @@ def as_decoded(light_xy: XY, daylight_from_decoded: np.ndarray | None) -> XY:
     """Return the chromaticity that this light has in the frame as decoded, the camera's balance baked in."""
     if daylight_from_decoded is None:
         return light_xy
-    return xy_from_linear(np.linalg.solve(daylight_from_decoded, linear_from_xy(light_xy)))
+    x, y = xy_from_linear(np.linalg.solve(daylight_from_decoded, linear_from_xy(light_xy)))
+    return float(x), float(y)
 
 
 def known_lights(cards: Iterable[str], limits: ReadLimits) -> dict[str, XY]:
@@ -61,26 +63,10 @@ def known_lights(cards: Iterable[str], limits: ReadLimits) -> dict[str, XY]:
         path, _, box = text.rpartition("@")
         if not path:
             raise PresetError(f"--grey-card {text!r} is not FRAME@X,Y,W,H", hint="give the patch in pixels")
-        sample = casts.sample_patch(files.read(path, limits), parse_box(box))
+        frame = files.read(path, limits)
+        sample = casts.sample_patch(frame, stored_box(parse_box(box), frame.header))
         lights[path] = sample.light_xy
     return lights
-
-
-def parse_box(text: str) -> tuple[float, float, float, float]:
-    """Return X,Y,W,H: pixels, or fractions of the frame where all four are at most 1.
-
-    Examples
-    --------
-    >>> parse_box("10,20,300,200")
-    (10.0, 20.0, 300.0, 200.0)
-    """
-    try:
-        x, y, width, height = map(float, text.split(","))
-    except ValueError:
-        raise PresetError(
-            f"the patch {text!r} is not X,Y,W,H", hint="write four numbers, as 120,80,60,60"
-        ) from None
-    return x, y, width, height
 
 
 def read_stretches(path: str | os.PathLike[str] | None) -> list[tuple[str, str]] | None:

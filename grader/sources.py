@@ -13,7 +13,36 @@ from pathlib import Path, PurePath
 from grader.errors import MissingFile, PresetError
 
 RAW_SUFFIXES = frozenset(
-    [".3fr", ".arw", ".bay", ".cr2", ".cr3", ".crw", ".dcr", ".dng", ".erf", ".fff", ".iiq", ".k25", ".kdc", ".mef", ".mos", ".mrw", ".nef", ".nrw", ".orf", ".pef", ".raf", ".raw", ".rw2", ".rwl", ".sr2", ".srf", ".srw", ".x3f"]
+    [
+        ".3fr",
+        ".arw",
+        ".bay",
+        ".cr2",
+        ".cr3",
+        ".crw",
+        ".dcr",
+        ".dng",
+        ".erf",
+        ".fff",
+        ".iiq",
+        ".k25",
+        ".kdc",
+        ".mef",
+        ".mos",
+        ".mrw",
+        ".nef",
+        ".nrw",
+        ".orf",
+        ".pef",
+        ".raf",
+        ".raw",
+        ".rw2",
+        ".rwl",
+        ".sr2",
+        ".srf",
+        ".srw",
+        ".x3f",
+    ]
 )
 PICTURE_SUFFIXES = RAW_SUFFIXES | frozenset([".tif", ".tiff", ".jpg", ".jpeg", ".jpe", ".png"])
 """Suffixes that make a file in a *folder* part of a batch; a file named by itself is always taken."""
@@ -105,22 +134,24 @@ def _is_inside(path: str, folder: str) -> bool:
     return path == folder or path.startswith(folder.rstrip(os.path.sep) + os.path.sep)
 
 
-def check_target_folder(sources: Iterable[Source], out: str | os.PathLike[str]) -> None:
+def check_target_folder(paths: Iterable[str | os.PathLike[str]], out: str | os.PathLike[str]) -> None:
     """Refuse a target folder in which an output could lie beside its original.
 
     Raises
     ------
     PresetError
-        ``out`` is a folder that holds one of the sources.
+        ``out`` is a folder that was given as input, or that holds a file that was.
     """
     real_out = os.path.realpath(out)
-    for source in sources:
-        if os.path.dirname(os.path.realpath(source.path)) == real_out:  # noqa: PTH120
-            raise PresetError(
-                "the output folder is the folder of the originals",
-                path=str(out),
-                hint="choose another --out folder",
-            )
+    for given in map(os.fspath, paths):
+        for match in [given] if os.path.lexists(given) else glob.glob(given, recursive=True):  # noqa: PTH207
+            real = os.path.realpath(match)
+            if real_out == (real if os.path.isdir(real) else os.path.dirname(real)):  # noqa: PTH112, PTH120
+                raise PresetError(
+                    "the output folder is the folder of the originals",
+                    path=str(out),
+                    hint="choose another --out folder",
+                )
 
 
 def name_targets(sources: Sequence[Source], suffixes: Sequence[str]) -> list[PurePath]:

@@ -29,10 +29,12 @@ ALLOWED = {
     "shootfile": LEAVES | {"cast", "colour", "files"},
     "reporting": LEAVES | {"files", "log", "pixels", "report"},
     "checking": LEAVES | {"cast", "files", "log", "workers"},
-    "batch": LEAVES | {"cast", "colour", "jobs", "log", "preset", "run", "shootfile", "sources", "workers"},
+    "exporting": LEAVES | {"cast", "clf", "log", "preset"},
+    "batch": LEAVES
+    | {"cast", "colour", "files", "jobs", "log", "preset", "run", "shootfile", "sources", "workers"},
 }
 ALLOWED["cli"] = set(ALLOWED)
-LATE = {("model", "colour"), ("batch", ""), ("cluster", ""), ("cli", "")}
+LATE = {("model", "colour"), ("batch", ""), ("cluster", ""), ("cli", ""), ("files", "")}
 """Imports inside functions that the rule would forbid: Frame.from_array, and the version number."""
 
 

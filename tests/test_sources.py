@@ -60,17 +60,17 @@ def test_two_folders_keep_their_trees_apart(tree: Path) -> None:
 
 
 def test_the_folder_of_the_originals_is_no_target(tree: Path) -> None:
-    sources, _ = find_sources([tree])
-    with pytest.raises(PresetError, match="originals"):
-        check_target_folder(sources, tree)
-    check_target_folder(sources, tree / "graded")
+    for place in (tree, tree / "a.dng", f"{tree}/*.dng"):
+        with pytest.raises(PresetError, match="originals"):
+            check_target_folder([place], tree)
+    check_target_folder([tree], tree / "graded")
 
 
 def test_a_linked_target_folder_is_seen_through(tree: Path) -> None:
     link = tree.parent / "link"
     link.symlink_to(tree)
     with pytest.raises(PresetError):
-        check_target_folder(find_sources([tree])[0], link)
+        check_target_folder([tree], link)
 
 
 NAME = st.text(st.characters(codec="utf-8", exclude_characters="/\0"), min_size=1, max_size=6).filter(

@@ -101,21 +101,33 @@ encoding = _options(
         help="File format to write; dng: a copy of a DNG that opens with the planned balance. [same; RAW: tiff]",
     ),
     click.option("--space", metavar="SPACE", help=f"Colour space to write: {_SPACES}. [source]"),
-    click.option("--tone", type=click.Choice(["standard", "linear"]), help="Tone curve of RAW frames. [standard]"),
-    click.option("--exposure", type=float, metavar="EV", help="Brighten (+) or darken (-) all frames alike. [0]"),
+    click.option(
+        "--tone", type=click.Choice(["standard", "linear"]), help="Tone curve of RAW frames. [standard]"
+    ),
+    click.option(
+        "--exposure", type=float, metavar="EV", help="Brighten (+) or darken (-) all frames alike. [0]"
+    ),
     click.option(
         "--strip-location", is_flag=True, default=None, help="Leave the place of capture out of the results."
     ),
 )
 
 output = _options(
-    click.option("--out", required=True, type=click.Path(file_okay=False), metavar="DIR", help="Folder for the results."),
+    click.option(
+        "--out",
+        required=True,
+        type=click.Path(file_okay=False),
+        metavar="DIR",
+        help="Folder for the results.",
+    ),
     encoding,
     click.option("--overwrite", is_flag=True, help="Replace results that are there already."),
     click.option("--resume", is_flag=True, help="Go on with an earlier run into the same folder."),
     click.option("--dry-run", is_flag=True, help="Measure and plan, write nothing."),
     click.option("--report", type=_FILE, metavar="FILE", help="Write the report as one HTML file."),
-    click.option("--contact-sheet", type=_FILE, metavar="FILE.jpg", help="Write before/after pictures on sheets."),
+    click.option(
+        "--contact-sheet", type=_FILE, metavar="FILE.jpg", help="Write before/after pictures on sheets."
+    ),
 )
 
 running = _options(
@@ -150,8 +162,8 @@ def chosen_preset(preset: Preset | None, given: dict[str, Any]) -> Preset:
     changes |= {"pooling": False if given.get("per_frame") else None}
     changes |= {name: given.get(option) for name, option in _OUTPUT_FIELDS.items()}
     changes = {name: value for name, value in changes.items() if value is not None}
-    if "toward" in changes:
-        changes["toward"] = _aim(changes["toward"])
+    if given.get("toward") is not None:
+        changes["toward"] = _aim(given["toward"])
     if preset is not None and not changes:
         return preset
     name = "unsaved" if preset is None else preset.name
@@ -172,7 +184,13 @@ _RECIPE_FIELDS = (
     "keep_yellow_blue", "keep_green_magenta", "toward", "opponent", "adaptation", "degree", "coloured_light",
     "match_bodies", "tolerance_delta_e_2000",
 )  # fmt: skip
-_OUTPUT_FIELDS = {"format": "output_format", "space": "space", "tone": "tone", "exposure_ev": "exposure", "strip_location": "strip_location"}
+_OUTPUT_FIELDS = {
+    "format": "output_format",
+    "space": "space",
+    "tone": "tone",
+    "exposure_ev": "exposure",
+    "strip_location": "strip_location",
+}
 
 
 def run_options(given: dict[str, Any]) -> Options:

@@ -30,12 +30,30 @@ Without --patch, --target or --hero the grey card is looked for; look at --pictu
 Several frames give one robust mean.  A patch that is clipped, too small, textured or coloured is refused."""
 )
 @click.argument("frames", nargs=-1, required=True, metavar="FRAME...")
-@click.option("--patch", metavar="X,Y,W,H", help="The neutral, in pixels as you see the picture, or as fractions or %.")
-@click.option("--target", metavar="X,Y,...", help="Four corners (8 numbers) of a 24-patch target: its grey row is measured.")
+@click.option(
+    "--patch", metavar="X,Y,W,H", help="The neutral, in pixels as you see the picture, or as fractions or %."
+)
+@click.option(
+    "--target",
+    metavar="X,Y,...",
+    help="Four corners (8 numbers) of a 24-patch target: its grey row is measured.",
+)
 @click.option("--hero", is_flag=True, help="Take the measured light of the whole frame.")
-@click.option("--save", "target_file", required=True, type=click.Path(dir_okay=False), metavar="FILE.json", help="The preset.")
+@click.option(
+    "--save",
+    "target_file",
+    required=True,
+    type=click.Path(dir_okay=False),
+    metavar="FILE.json",
+    help="The preset.",
+)
 @click.option("--name", metavar="NAME", help="The preset's name. [the file's name]")
-@click.option("--picture", type=click.Path(dir_okay=False), metavar="FILE.png", help="A small picture showing the patch.")
+@click.option(
+    "--picture",
+    type=click.Path(dir_okay=False),
+    metavar="FILE.png",
+    help="A small picture showing the patch.",
+)
 @click.option("--overwrite", is_flag=True, help="Replace a preset that is there already.")
 @click.option("--json", "as_json", is_flag=True, help="Write what was measured to stdout as JSON.")
 @options.recipe
@@ -67,7 +85,7 @@ def sample(frames: tuple[str, ...], **given: Any) -> int:
 def _measure(path: str, given: dict[str, Any]) -> tuple[PatchSample, Header]:
     from grader import files  # noqa: PLC0415 - after --help
     from grader.cast import measure  # noqa: PLC0415
-    from grader.cast.box import parse_box  # noqa: PLC0415
+    from grader.cast.box import parse_box, stored_box  # noqa: PLC0415
     from grader.cast.sample import sample_hero, sample_patch  # noqa: PLC0415
     from grader.cast.target import sample_target  # noqa: PLC0415
 
@@ -75,9 +93,9 @@ def _measure(path: str, given: dict[str, Any]) -> tuple[PatchSample, Header]:
     if given["hero"]:
         found = sample_hero(measure(frame))
     elif given["target"]:
-        found = sample_target(frame, _corners(given["target"]))
+        found = sample_target(frame, _corners(given["target"], frame.header))
     elif given["patch"]:
-        found = sample_patch(frame, parse_box(given["patch"]))
+        found = sample_patch(frame, stored_box(parse_box(given["patch"]), frame.header))
     else:
         found = _find_card(frame)
     if given["picture"]:
@@ -89,7 +107,8 @@ def _find_card(frame: Frame) -> PatchSample:
     from grader.cast.card import find_grey_card  # noqa: PLC0415 - after --help
 
     card = find_grey_card(frame)
-    click.echo(f"{frame.header.file}: took the area at {','.join(map(str, card.box_px))} for the grey card", err=True)
+    place = ",".join(map(str, card.box_px))
+    click.echo(f"{frame.header.file}: took the area at {place} (as stored) for the grey card", err=True)
     return card.sample
 
 
@@ -102,28 +121,40 @@ def _write_picture(frame: Frame, found: PatchSample, target: str) -> None:
 
     if found.box_px is None:
         raise PresetError("there is no patch to show", hint="leave out --picture")
-    write_atomic(target, imagecodecs.png_encode(mark_box(build_proxy(frame), found.box_px)), overwrite=True)
+    picture = mark_box(build_proxy(frame), found.box_px)
+    write_atomic(target, bytes(imagecodecs.png_encode(picture)), overwrite=True)
 
 
-def _corners(text: str) -> tuple[tuple[float, float], ...]:
+def _corners(text: str, header: Header) -> Any:
+    """Return the four corners in pixels of the stored orientation."""
+    from grader.cast.box import stored_box  # noqa: PLC0415 - after --help
+
     try:
         numbers = [float(number) for number in text.split(",")]
     except ValueError:
         numbers = []
     if len(numbers) != 8:
         raise PresetError(
-            f"--target {text!r} is not eight numbers", hint="write the four corners in turn: X1,Y1,X2,Y2,X3,Y3,X4,Y4"
+            f"--target {text!r} is not eight numbers",
+            hint="write the four corners in turn: X1,Y1,X2,Y2,X3,Y3,X4,Y4",
         )
-    return tuple(zip(numbers[::2], numbers[1::2], strict=True))
+    corners = zip(numbers[::2], numbers[1::2], strict=True)
+    return tuple(stored_box((x, y, 0.0, 0.0), header)[:2] for x, y in corners)
 
 
 def _tell_sample(found: PatchSample, saved: Preset, given: dict[str, Any]) -> None:
     x, y = found.light_xy
     if given["as_json"]:
         values = {"light_xy": [x, y], "duv": found.duv, "doubt_deg": found.doubt_deg, "by": found.by}
-        click.echo(json.dumps(values | {"notes": list(found.notes), "preset": given["target_file"], "digest": saved.digest}))
+        click.echo(
+            json.dumps(
+                values | {"notes": list(found.notes), "preset": given["target_file"], "digest": saved.digest}
+            )
+        )
     else:
-        click.echo(f"light x {x:.4f}, y {y:.4f}, Duv {found.duv:+.4f}; doubt {found.doubt_deg:.1f} degrees", err=True)
+        click.echo(
+            f"light x {x:.4f}, y {y:.4f}, Duv {found.duv:+.4f}; doubt {found.doubt_deg:.1f} degrees", err=True
+        )
         for note in found.notes:
             click.echo(f"note: {note}", err=True)
         click.echo(f"saved {given['target_file']}", err=True)
@@ -166,8 +197,12 @@ A Common LUT Format file holds the matrix between the space's curves.  It cannot
 neighbourhood of white or of the gamut's edge: blending of highlights, pulling colours into the gamut."""
 )
 @click.argument("source", metavar="PRESET|LOG")
-@click.option("--out", required=True, type=click.Path(file_okay=False), metavar="DIR", help="Folder for the files.")
-@click.option("--space", default="sRGB", metavar="SPACE", help="Colour space of the pictures they are for. [sRGB]")
+@click.option(
+    "--out", required=True, type=click.Path(file_okay=False), metavar="DIR", help="Folder for the files."
+)
+@click.option(
+    "--space", default="sRGB", metavar="SPACE", help="Colour space of the pictures they are for. [sRGB]"
+)
 @click.option("--overwrite", is_flag=True, help="Replace files that are there already.")
 @click.option("--json", "as_json", is_flag=True, help="Write one JSON object a file to stdout.")
 def export(source: str, *, out: str, space: str, overwrite: bool, as_json: bool) -> int:

@@ -21,6 +21,7 @@ pixels_per_metre  PNG: the pHYs chunk;  interlaced (bool), colour_chunks ((type,
 ================  ==================================================================================
 """
 
+from grader.files.digest import hash_file
 from grader.files.dng import rewrite_raw
 from grader.files.profile_build import profile_bytes
 from grader.files.raw import sensor_multipliers
@@ -28,6 +29,7 @@ from grader.files.reading import kind_of, read, read_reduced
 from grader.files.writing import suffix_for, write
 
 __all__ = [
+    "hash_file",
     "kind_of",
     "profile_bytes",
     "read",
