@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import Any, BinaryIO, Final
 
 from grader.files import xmp
+from grader.files.metadata_boxes import tree_of_boxes
 from grader.files.metadata_build import append_tree, tree_bytes
 from grader.files.metadata_facts import facts_of
 from grader.files.metadata_output import for_output
@@ -29,6 +30,7 @@ from grader.model import Metadata, ReadLimits
 __all__ = [
     "byte_order",
     "for_output",
+    "from_boxes",
     "from_jpeg_info",
     "from_png_info",
     "from_tiff",
@@ -98,6 +100,14 @@ def from_tiff(
     iptc, resources = split_resources(chain.data) if chain else (None, None)
     _without_sensor(tree)
     return _gather(tree, packet.data if packet else None, direct or iptc, resources)
+
+
+def from_boxes(stream: BinaryIO, limits: ReadLimits | None = None) -> tuple[Facts, Metadata]:
+    """Return what a raw file built of boxes tells, as `from_tiff` does; nothing where it has no such boxes."""
+    tree = tree_of_boxes(stream, (limits or ReadLimits()).max_metadata_bytes)
+    for tag in PICTURE_TAGS & tree.ifd0.keys():
+        del tree.ifd0[tag]
+    return _gather(tree, None, None, None)
 
 
 def from_jpeg_info(

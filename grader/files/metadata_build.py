@@ -101,7 +101,7 @@ def tree_bytes(tree: Tree) -> bytes:
     --------
     >>> from grader.files.metadata_tree import ascii_field
     >>> tree_bytes(Tree("<", {0x010F: ascii_field("abc")})).hex(" ", 4)
-    '49492a00 08000000 01000f01 02000400 00006162 63000000 0000'
+    '4949 2a000800 00000100 0f010200 04000000 61626300 00000000'
     """
     note, at = tree.exif.get(MAKER_NOTE), tree.maker_note_offset
     fixed, kept = {}, None

@@ -28,7 +28,7 @@ from grader.files.raw_colour import (
     sensor_of,
 )
 from grader.files.raw_identify import dng_colour, is_dng, is_raw
-from grader.files.raw_reduce import reduce_mosaic
+from grader.files.raw_reduce import pattern_of, reduce_mosaic
 from grader.model import Frame, Header, Metadata, ReadLimits
 
 __all__ = ["is_dng", "is_raw", "read", "read_header", "read_reduced", "sensor_multipliers"]
@@ -170,17 +170,18 @@ def _open(raw: Any, path: str | PathLike[str]) -> None:
 
 def _decoded(raw: Any, colour: RawColour, *, half_size: bool = False) -> NDArray[np.uint16]:
     """Return LibRaw's decode (H, W, 3); a sensor without colour gives three equal channels."""
-    options: dict[str, Any] = {"user_wb": [float(m) for m in colour.balance]}
+    pixels = raw.postprocess(half_size=half_size, **{**_DECODE, **_options(raw, colour)})
+    if pixels.ndim == 2 or pixels.shape[2] == 1:
+        pixels = np.repeat(pixels.reshape(*pixels.shape[:2], 1), 3, axis=2)
+    return np.ascontiguousarray(pixels[..., :3])
+
+
+def _options(raw: Any, colour: RawColour) -> dict[str, Any]:
+    """Return what this file's decode asks for beyond `_DECODE`."""
     stacked = raw.raw_type == rawpy.RawType.Stack
+    options: dict[str, Any] = {"user_wb": [float(m) for m in colour.balance]}
     if stacked and colour.as_shot_usable:
         options = {"use_camera_wb": True}  # some of these have their balance applied already; LibRaw knows
-    sizes = raw.sizes
-    if (
-        raw.raw_pattern is not None
-        and len(raw.raw_pattern) == 6
-        and min(sizes.width, sizes.height) < _SIX_LEAST_PX
-    ):
-        options["demosaic_algorithm"] = rawpy.DemosaicAlgorithm.LINEAR
     black = raw.black_level_per_channel
     if stacked and black[3] < min(black[:3]):  # LibRaw forgets black when it scales demosaiced kinds
         options["user_sat"] = max(raw.white_level - min(black[:3]), 1)
@@ -188,10 +189,10 @@ def _decoded(raw: Any, colour: RawColour, *, half_size: bool = False) -> NDArray
         colour.working_from_balanced is None
     ):  # sensor colours lie near Rec.2020's: better than a broken matrix
         options["output_color"] = rawpy.ColorSpace.raw
-    pixels = raw.postprocess(half_size=half_size, **{**_DECODE, **options})
-    if pixels.ndim == 2 or pixels.shape[2] == 1:
-        pixels = np.repeat(pixels.reshape(*pixels.shape[:2], 1), 3, axis=2)
-    return np.ascontiguousarray(pixels[..., :3])
+    pattern = pattern_of(raw)
+    if pattern is not None and len(pattern) == 6 and min(raw.sizes.width, raw.sizes.height) < _SIX_LEAST_PX:
+        options["demosaic_algorithm"] = rawpy.DemosaicAlgorithm.LINEAR
+    return options
 
 
 def _header(raw: Any, path: str | PathLike[str], limits: ReadLimits) -> tuple[Header, Metadata, RawColour]:
@@ -251,13 +252,17 @@ def _frame(header: Header, blobs: Metadata, pixels: NDArray[np.uint16], *, grey:
 
 
 def _facts(raw: Any, path: str | PathLike[str], limits: ReadLimits) -> tuple[metadata.Facts, Metadata]:
-    """Return what the file's own tags tell; where it has no TIFF structure, what its preview and LibRaw tell."""
+    """Return what the file's own tags tell; where it has none that are known, what its preview and LibRaw tell."""
+    facts: metadata.Facts = {}
+    blobs = Metadata()
     with Path(path).open("rb") as stream:
-        if stream.read(2) in (b"II", b"MM"):
+        head = stream.read(8)
+        if head[:2] in (b"II", b"MM"):
             facts, blobs = metadata.from_tiff(stream, limits)
-            if facts.keys() - {"notes"}:
-                return facts, blobs
-    facts, blobs = _preview_facts(raw, limits)
+        elif head[4:8] == b"ftyp":
+            facts, blobs = metadata.from_boxes(stream, limits)
+    if not facts.keys() - {"notes"}:
+        facts, blobs = _preview_facts(raw, limits)
     return {**_libraw_facts(raw), **facts}, blobs
 
 

@@ -17,6 +17,15 @@ _SATURATED: Final = 0.995
 """Share of the usable range from which a photosite counts as clipped: the same half per cent as the proxy's."""
 
 
+def pattern_of(raw: Any) -> NDArray[np.uint8] | None:
+    """Return the colours of a period of the filter array; None where there is none, or none that rawpy knows."""
+    try:
+        pattern: NDArray[np.uint8] | None = raw.raw_pattern
+    except NotImplementedError:
+        return None
+    return pattern
+
+
 def reduce_mosaic(raw: Any, colour: RawColour, target_px: int) -> NDArray[np.uint16] | None:
     """Return a small picture in linear Rec.2020 averaged from whole periods of the colour filter array.
 
@@ -34,7 +43,7 @@ def reduce_mosaic(raw: Any, colour: RawColour, target_px: int) -> NDArray[np.uin
     (h, w, 3) uint16 or None
         Scaled as LibRaw scales its decode; None where this mosaic is of a kind that LibRaw should reduce itself.
     """
-    pattern = raw.raw_pattern
+    pattern = pattern_of(raw)
     if pattern is None or colour.working_from_balanced is None or colour.colours < 3:
         return None
     mosaic = raw.raw_image_visible

@@ -267,6 +267,36 @@ def test_clipping_paths_are_carried(tmp_path):
         assert again.iptc is None
 
 
+def test_directories_kept_in_boxes():
+    """ISO/IEC 14496-12 boxes: size, kind, contents; a size of 1 means a long one, of 0 the rest of the file."""
+
+    def box(kind, body, long=False):
+        head = (
+            struct.pack(">I4sQ", 1, kind, 16 + len(body))
+            if long
+            else struct.pack(">I4s", 8 + len(body), kind)
+        )
+        return head + body
+
+    first = _exif([(0x010F, 2, 5, b"Lumo\0"), (0x0110, 2, 8, b"Lumo K3\0")])
+    exif = _exif([(0x9003, 2, 20, b"2031:05:04 18:30:09\0"), (0xA431, 2, 5, b"0043\0")], ">")
+    gps = _exif([(1, 2, 2, b"N\0")])
+    own = box(
+        b"uuid",
+        bytes(16) + box(b"CNCV", b"x") + box(b"CMT1", first) + box(b"CMT2", exif) + box(b"CMT4", gps, True),
+    )
+    whole = (
+        box(b"ftyp", b"crx ") + box(b"moov", own + box(b"mvhd", bytes(9))) + struct.pack(">I4s", 0, b"mdat")
+    )
+    facts, carried = metadata.from_boxes(io.BytesIO(whole))
+    assert facts["body"] == "Lumo K3 0043"
+    assert facts["taken_at"] == "2031-05-04T18:30:09"
+    tags = tifftools.read_tiff(io.BytesIO(carried.exif))["ifds"][0]["tags"]
+    assert tags[0x8825]["ifds"][0][0]["tags"][1]["data"] == "N"
+    for cut in range(0, len(whole), 7):
+        metadata.from_boxes(io.BytesIO(whole[:cut]))
+
+
 def test_what_a_jpeg_cannot_hold_is_left_out_with_a_note(tmp_path):
     carried = Metadata(exif=_exif_with_note("<", 70_000, note=bytes(90_000)))
     frame = Frame(_pixels(), SPACES["sRGB"], Header(), carried)
