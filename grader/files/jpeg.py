@@ -86,8 +86,10 @@ def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
     if raster.is_grey(frame):
         pixels = np.ascontiguousarray(pixels[..., 0])
     buffer = io.BytesIO()
-    options: dict[str, Any] = {"quality": _DEFAULT_QUALITY, "subsampling": 0, "optimize": True}
+    options: dict[str, Any] = {"subsampling": 0, "optimize": True}
     options |= _as_source(frame, grey=pixels.ndim == 2)
+    if "qtables" not in options:  # beside tables, Pillow would scale them by the quality
+        options["quality"] = _DEFAULT_QUALITY
     if icc is not None:
         options["icc_profile"] = icc
     options["extra"] = metadata.jpeg_segments(carried)

@@ -15,7 +15,16 @@ from numpy.typing import NDArray
 from PIL import PngImagePlugin
 
 from grader.errors import DamagedFile, UnsupportedFile
-from grader.files import metadata, png_chunks, png_colour, png_interlace, raster, raster_depth, raster_frame
+from grader.files import (
+    metadata,
+    png_chunks,
+    png_colour,
+    png_interlace,
+    png_text,
+    raster,
+    raster_depth,
+    raster_frame,
+)
 from grader.files.png_chunks import GREY, GREY_ALPHA, PALETTE, RGBA
 from grader.model import Frame, Metadata, ReadLimits
 
@@ -41,9 +50,9 @@ def read(path: Path, limits: ReadLimits) -> Frame:
         raise UnsupportedFile(
             "it is black and white without greys (1 bit)", hint="nothing here can be graded"
         )
-    image: Any = PngImagePlugin.PngImageFile(io.BytesIO(data))
-    decoded = _decoded(data, image, layout)
-    decoded.facts, decoded.metadata = metadata.from_png_info(image.info, limits)
+    decoded = _decoded(png_chunks.essential(data), layout)
+    texts = png_text.info(layout, limits.max_metadata_bytes)
+    decoded.facts, decoded.metadata = metadata.from_png_info(texts, limits)
     _add_colour(decoded, layout)
     if b"acTL" in layout.chunks:
         decoded.flag("page-chosen", "the file is animated; its still picture was taken")
@@ -52,20 +61,21 @@ def read(path: Path, limits: ReadLimits) -> Frame:
     return raster_frame.frame_from_decoded(decoded, path, hashlib.sha256(data).hexdigest())
 
 
-def _decoded(data: bytes, image: Any, layout: png_chunks.Layout) -> raster.Decoded:
+def _decoded(data: bytes, layout: png_chunks.Layout) -> raster.Decoded:
     colours = _COLOURS[layout.colour_type]
     kind: raster.Kind = "grey" if colours == 1 else "rgb"
     encoding = {
         "interlaced": layout.interlaced,
         "pixels_per_metre": layout.chunks.get(b"pHYs"),
+        "texts": png_text.others(layout),
         "colour_chunks": tuple((k, layout.chunks[k]) for k in png_colour.COLOUR_CHUNKS if k in layout.chunks),
     }
     if layout.colour_type == PALETTE:
-        colour, alpha = _palette(image, layout)
+        colour, alpha = _palette(data, layout)
         decoded = raster.Decoded(colour, kind, 8, "png", alpha=alpha, encoding=encoding)
         decoded.flag("converted", "the palette was resolved: written as RGB")
     else:
-        samples = _sixteen(data, layout) if layout.bits == 16 else _eight(image)
+        samples = _sixteen(data, layout) if layout.bits == 16 else _eight(data)
         samples = samples.reshape(layout.height_px, layout.width_px, -1)
         alpha = samples[..., colours] if samples.shape[2] > colours else _keyed(samples, layout)
         bits = max(layout.bits, 8)  # Pillow spreads 2 and 4 bits over 8
@@ -75,7 +85,8 @@ def _decoded(data: bytes, image: Any, layout: png_chunks.Layout) -> raster.Decod
     return decoded
 
 
-def _eight(image: Any) -> NDArray[Any]:
+def _eight(data: bytes) -> NDArray[Any]:
+    image = PngImagePlugin.PngImageFile(io.BytesIO(data))
     image.load()
     if image.mode not in ("L", "LA", "RGB", "RGBA"):
         raise DamagedFile(f"the picture has an unexpected form ({image.mode})")
@@ -91,8 +102,9 @@ def _sixteen(data: bytes, layout: png_chunks.Layout) -> NDArray[Any]:
     return samples
 
 
-def _palette(image: Any, layout: png_chunks.Layout) -> tuple[NDArray[Any], NDArray[Any] | None]:
+def _palette(data: bytes, layout: png_chunks.Layout) -> tuple[NDArray[Any], NDArray[Any] | None]:
     """Return the colours, and the alpha if any entry is transparent."""
+    image = PngImagePlugin.PngImageFile(io.BytesIO(data))
     image.load()
     indices = np.asarray(image)
     entries = layout.chunks[b"PLTE"]
@@ -151,4 +163,5 @@ def _chunks(frame: Frame, icc: bytes | None, carried: Metadata) -> list[tuple[by
         chunks += frame.encoding.get("colour_chunks", ())
     if frame.encoding.get("pixels_per_metre"):
         chunks.append((b"pHYs", frame.encoding["pixels_per_metre"]))
+    chunks += frame.encoding.get("texts", ())
     return chunks + metadata.png_chunks(carried)

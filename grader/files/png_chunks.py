@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import struct
 import zlib
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from typing import Final
 
@@ -32,6 +33,8 @@ class Layout:
     interlaced: bool
     chunks: dict[bytes, bytes] = field(default_factory=dict)
     """The first chunk of each ancillary type (and PLTE)."""
+    texts: list[tuple[bytes, bytes]] = field(default_factory=list)
+    """All text chunks, in their order."""
     bad: list[str] = field(default_factory=list)
     """Ancillary chunks whose checksum is wrong; they are left out."""
 
@@ -70,6 +73,8 @@ def _take(layout: Layout, kind: bytes, body: bytes, *, sound: bool) -> None:
         raise UnsupportedFile(f"it needs an unknown kind of chunk ({kind.decode('latin-1')})")
     if not sound:
         layout.bad.append(kind.decode("latin-1"))
+    elif kind in (b"tEXt", b"zTXt", b"iTXt"):
+        layout.texts.append((kind, body))
     elif kind != b"IDAT":
         layout.chunks.setdefault(kind, body)
 
@@ -98,15 +103,23 @@ def _header(body: bytes) -> Layout:
 
 def picture_data(data: bytes) -> bytes:
     """Return the bodies of all IDAT chunks of a file that `parse` let through, in one piece."""
-    bodies, position = [], len(SIGNATURE)
-    while position + 12 <= len(data):
+    return b"".join(body for kind, body, _ in _spans(data) if kind == b"IDAT")
+
+
+def essential(data: bytes) -> bytes:
+    """Return a file that `parse` let through without its ancillary chunks: decoders trip over damaged ones."""
+    wanted = (b"IHDR", b"PLTE", b"IDAT", b"IEND")
+    return SIGNATURE + b"".join(whole for kind, _, whole in _spans(data) if kind in wanted)
+
+
+def _spans(data: bytes) -> Iterator[tuple[bytes, memoryview, memoryview]]:
+    """Return type, body and whole of each chunk up to the end of the picture."""
+    view, position, kind = memoryview(data), len(SIGNATURE), b""
+    while kind != b"IEND":
         length, kind = struct.unpack_from(">I4s", data, position)
-        if kind == b"IDAT":
-            bodies.append(data[position + 8 : position + 8 + length])
-        elif kind == b"IEND":
-            break
-        position += 12 + length
-    return b"".join(bodies)
+        end = position + 12 + length
+        yield kind, view[position + 8 : end - 4], view[position:end]
+        position = end
 
 
 def chunk(kind: bytes, body: bytes) -> bytes:

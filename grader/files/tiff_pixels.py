@@ -92,11 +92,13 @@ def encoding(page: Any) -> dict[str, Any]:
 
 
 def _resolution(page: Any) -> tuple[tuple[int, int], tuple[int, int], int] | None:
-    """Return the x and y resolution as stored, and their unit (1 none, 2 inch, 3 cm)."""
-    x, y = page.tags.valueof(282), page.tags.valueof(283)
+    """Return the x and y resolution as stored, and their unit (1 none, 2 inch, 3 cm); None where it says nothing."""
+    x, y, unit = page.tags.valueof(282), page.tags.valueof(283), page.tags.valueof(296, 2)
     if not all(isinstance(v, tuple) and len(v) == 2 and v[0] > 0 and v[1] > 0 for v in (x, y)):
         return None
-    return (x, y, int(page.tags.valueof(296, 2)))
+    if (x, y, unit) == ((1, 1), (1, 1), 1):
+        return None
+    return (x, y, int(unit))
 
 
 def inverted(samples: NDArray[Any], bits: int) -> NDArray[Any]:
