@@ -25,6 +25,8 @@ _BAND_MIRED: Final = (85.0, 555.0)
 _BAND_DUV: Final = 0.02
 """Lamps and daylight lie within about this distance of the locus (common practice)."""
 _BINS: Final = 24
+_BINNED: Final = 0.99
+"""Share of the casts that the histogram spans; the last bin holds what lies beyond."""
 _LONG_PAUSE_S: Final = 6 * 3600.0
 
 
@@ -97,7 +99,7 @@ def histogram(shoot: Shoot) -> dict[str, Any]:
     """Return how many frames had, and have, which cast (Delta E 2000 of a mid grey)."""
     before = [row.delta_e_2000 for row in shoot.frames if row.delta_e_2000 is not None]
     after = [row.residual_delta_e_2000 for row in shoot.frames if row.residual_delta_e_2000 is not None]
-    most = max([*before, *after], default=0.0)
+    most = float(np.quantile([*before, *after], _BINNED)) if before or after else 0.0
     width = next((w for w in (0.25, 0.5, 1.0, 2.0, 5.0) if most / w < _BINS), 10.0)
     edges = np.arange(0.0, min(most, 10.0 * _BINS) + width, width)
     counts = [np.histogram(np.minimum(values, edges[-1]), edges)[0].tolist() for values in (before, after)]

@@ -19,7 +19,7 @@ from markupsafe import Markup
 
 from grader.atomic import write_atomic
 from grader.report import charts, verdict, words
-from grader.report.pictures import CARD_SIDE_PX, Thumbnails, pair_of, plan_sides, small_uri, spread_evenly
+from grader.report.pictures import Thumbnails, UriPair, picture_pairs, spread_evenly
 from grader.report.records import FrameRow, Line, Shoot, listing, mapping, number, text
 from grader.report.recount import read_shoot
 
@@ -30,7 +30,6 @@ MOST_CARDS: Final = 240
 OPEN_CARDS: Final = 24
 """Cards that stand open, with larger pictures; the rest opens on demand."""
 MOST_ROWS: Final = 300
-_CARD_BYTES: Final = 12_000
 
 
 def write_html(
@@ -69,9 +68,16 @@ def render_html(records: Iterable[Line], *, thumbnails: Thumbnails | None = None
     data_text = _json(data)
     cards = look[:MOST_CARDS]
     spent = len(_library()) + len(data_text) + 2000 * len(cards) + 200_000
-    pictures = _pictures(drawn, cards, thumbnails, BUDGET_BYTES - spent)
     places = {row.file: index for index, row in enumerate(drawn)}
-    stored = {place: pair for place, pair in pictures.items() if place not in _card_places(cards, places)}
+    card_places = [places[row.file] for row in cards if row.file in places]
+    pictures = picture_pairs(
+        drawn,
+        thumbnails,
+        large=card_places[:OPEN_CARDS],
+        first=card_places[OPEN_CARDS:],
+        budget=BUDGET_BYTES - spent,
+    )
+    stored = {place: pair for place, pair in pictures.items() if place not in card_places}
     style, script = _asset("report.css"), _asset("report.js")
     return (
         _environment()
@@ -134,37 +140,8 @@ def _drawn(shoot: Shoot, look: Sequence[FrameRow]) -> list[FrameRow]:
     return [row for row in ordered if row.file in kept]
 
 
-def _card_places(cards: Sequence[FrameRow], places: dict[str, int]) -> set[int]:
-    return {places[row.file] for row in cards if row.file in places}
-
-
-def _pictures(
-    drawn: Sequence[FrameRow], cards: Sequence[FrameRow], thumbnails: Thumbnails | None, budget_bytes: int
-) -> dict[int, list[str | None]]:
-    """Return small pictures by place in ``drawn``, within a budget: those to look at first, and larger."""
-    if thumbnails is None:
-        return {}
-    places = {row.file: index for index, row in enumerate(drawn)}
-    large = [places[row.file] for row in cards[:OPEN_CARDS] if row.file in places]
-    wanted = [places[row.file] for row in cards[OPEN_CARDS:] if row.file in places]
-    rest = sorted(set(range(len(drawn))) - set(large) - set(wanted))
-    left = budget_bytes - len(large) * 2 * _CARD_BYTES * 4 // 3
-    frames, side_px, most_bytes = plan_sides(len(wanted) + len(rest), left)
-    small = (wanted + spread_evenly(rest, max(frames - len(wanted), 0)))[:frames]
-    sizes = dict.fromkeys(large, (CARD_SIDE_PX, _CARD_BYTES)) | dict.fromkeys(small, (side_px, most_bytes))
-    pictures = {}
-    for index in sorted(sizes):
-        pair = [
-            None if one is None else small_uri(one, *sizes[index])
-            for one in pair_of(thumbnails, drawn[index])
-        ]
-        if any(pair):
-            pictures[index] = pair
-    return pictures
-
-
 def _strips(
-    shoot: Shoot, drawn: Sequence[FrameRow], pictures: dict[int, list[str | None]], places: dict[str, int]
+    shoot: Shoot, drawn: Sequence[FrameRow], pictures: dict[int, UriPair], places: dict[str, int]
 ) -> dict[str, list[int]]:
     """Return for each stretch the places of a few frames with pictures, spread over it."""
     found: dict[str, list[int]] = {}

@@ -7,19 +7,22 @@ import io
 from collections.abc import Callable, Sequence
 from typing import Final
 
-from PIL import Image, ImageOps
+from PIL import Image
 
 from grader.errors import GraderError
 from grader.report.records import FrameRow, Line
 
 Pair = tuple[bytes | None, bytes | None]
 Thumbnails = Callable[[Line], Pair]
+UriPair = tuple[str | None, str | None]
 
 CARD_SIDE_PX: Final = 320
 _CARD_QUALITY: Final = 60
-_SIDES: Final = ((320, 11_000), (240, 7_000), (160, 3_600), (128, 2_300), (96, 1_300))
-"""Longer sides of a small picture and the bytes that a busy photograph takes there (measured on packaged ones)."""
-_QUALITIES: Final = (50, 30, 15)
+_SMALL_QUALITY: Final = 45
+_SIDES: Final = (320, 240, 160, 128, 96)
+_TRIED: Final = 12
+_SPARE: Final = 0.9
+"""Share of the budget that is planned for; pictures differ from those tried."""
 
 
 def open_picture(data: bytes | None) -> Image.Image | None:
@@ -44,49 +47,86 @@ def pair_of(thumbnails: Thumbnails | None, row: FrameRow) -> tuple[Image.Image |
     return open_picture(before), open_picture(after)
 
 
-def small_uri(picture: Image.Image, side_px: int, most_bytes: int | None = None) -> str:
-    """Return a picture as a ``data:`` address, no longer than wanted where its content allows.
-
-    Parameters
-    ----------
-    picture : Image
-        RGB.
-    side_px : int
-        Longest side.
-    most_bytes : int, optional
-        Coarser settings are tried, up to the coarsest, until the picture fits.
-    """
-    small = (
-        ImageOps.contain(picture, (side_px, side_px), Image.Resampling.LANCZOS)
-        if _larger(picture, side_px)
-        else picture
-    )
-    for quality in (_CARD_QUALITY,) if most_bytes is None else _QUALITIES:
-        buffer = io.BytesIO()
-        small.save(buffer, "WEBP", quality=quality, method=4)
-        if most_bytes is None or buffer.tell() <= most_bytes:
-            break
+def small_uri(picture: Image.Image, side_px: int, quality: int = _SMALL_QUALITY) -> str:
+    """Return a picture as a ``data:`` address, its longer side at most ``side_px``."""
+    small = picture.copy()
+    small.thumbnail((side_px, side_px), Image.Resampling.BICUBIC, reducing_gap=2.0)
+    buffer = io.BytesIO()
+    small.save(buffer, "WEBP", quality=quality, method=2)
     return "data:image/webp;base64," + base64.b64encode(buffer.getvalue()).decode("ascii")
 
 
-def plan_sides(frames: int, budget_bytes: int) -> tuple[int, int, int]:
-    """Return how many frames get a pair of pictures, their longest side, and the most bytes of one.
+def picture_pairs(
+    rows: Sequence[FrameRow],
+    thumbnails: Thumbnails | None,
+    *,
+    large: Sequence[int],
+    first: Sequence[int],
+    budget: int,
+) -> dict[int, UriPair]:
+    """Return small pictures of frames before and after, together within a budget.
 
-    Examples
-    --------
-    >>> plan_sides(100, 4_000_000)
-    (100, 320, 15000)
-    >>> plan_sides(50_000, 4_000_000)
-    (1153, 96, 1300)
+    Parameters
+    ----------
+    rows : sequence of FrameRow
+        The frames.
+    thumbnails : callable, optional
+        Gives the JPEG bytes of a frame.
+    large : sequence of int
+        Places of the frames that get larger pictures in any case.
+    first : sequence of int
+        Places of those that come next; of the rest an even sample gets pictures where the budget is short.
+    budget : int
+        Length of all addresses together. [bytes]
+
+    Returns
+    -------
+    dict
+        Addresses (before, after) by place; a frame without any picture is left out.
     """
-    if frames <= 0 or budget_bytes <= 0:
-        return 0, _SIDES[-1][0], _SIDES[-1][1]
-    allowance = int(budget_bytes / (2 * frames) * 3 / 4)  # base64 makes four bytes of three
-    for side_px, usual_bytes in _SIDES:
-        if usual_bytes <= allowance:
-            return frames, side_px, allowance
-    side_px, least = _SIDES[-1]
-    return int(budget_bytes / (2 * least) * 3 / 4), side_px, least
+    if thumbnails is None:
+        return {}
+    pairs = _encoded(rows, thumbnails, large, CARD_SIDE_PX, _CARD_QUALITY)
+    left = budget - sum(map(_length, pairs.values()))
+    rest = sorted(set(range(len(rows))) - set(large) - set(first))
+    side_px, most = _fitting(rows, thumbnails, len(first) + len(rest), left)
+    chosen = [*first, *spread_evenly(rest, max(most - len(first), 0))][:most]
+    small = _encoded(rows, thumbnails, chosen, side_px, _SMALL_QUALITY)
+    while small and sum(map(_length, small.values())) > left:
+        kept = spread_evenly(list(small), int(len(small) * _SPARE))
+        small = {place: small[place] for place in kept}
+    return pairs | small
+
+
+def _fitting(rows: Sequence[FrameRow], thumbnails: Thumbnails, wanted: int, budget: int) -> tuple[int, int]:
+    """Return the longest side at which all wanted frames fit, else the shortest and how many fit, by trying some."""
+    tried = [pair_of(thumbnails, rows[place]) for place in spread_evenly(range(len(rows)), _TRIED)]
+    known = [picture for pair in tried for picture in pair if picture is not None]
+    if not known or budget <= 0:
+        return _SIDES[-1], 0
+    for side_px in _SIDES:
+        usual = 2 * sum(len(small_uri(picture, side_px)) for picture in known) / len(known)
+        if wanted * usual <= _SPARE * budget:
+            return side_px, wanted
+    return _SIDES[-1], int(_SPARE * budget / usual)
+
+
+def _encoded(
+    rows: Sequence[FrameRow], thumbnails: Thumbnails, places: Sequence[int], side_px: int, quality: int
+) -> dict[int, UriPair]:
+    pairs = {}
+    for place in places:
+        before, after = pair_of(thumbnails, rows[place])
+        if before is not None or after is not None:
+            pairs[place] = (
+                None if before is None else small_uri(before, side_px, quality),
+                None if after is None else small_uri(after, side_px, quality),
+            )
+    return pairs
+
+
+def _length(pair: UriPair) -> int:
+    return sum(len(uri) for uri in pair if uri is not None)
 
 
 def spread_evenly(items: Sequence[int], wanted: int) -> list[int]:
@@ -102,7 +142,3 @@ def spread_evenly(items: Sequence[int], wanted: int) -> list[int]:
     if wanted < 2:
         return list(items[:wanted])
     return [items[round(k * (len(items) - 1) / (wanted - 1))] for k in range(wanted)]
-
-
-def _larger(picture: Image.Image, side_px: int) -> bool:
-    return max(picture.size) > side_px

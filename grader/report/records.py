@@ -7,7 +7,6 @@ from __future__ import annotations
 
 import math
 import unicodedata
-from collections import Counter
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
@@ -334,7 +333,7 @@ def _row(record: Line, label: str, *, aware: bool, offset_s: float) -> FrameRow:
         residual_yellow_blue=number(residual.get("yellow_blue")),
         residual_green_magenta=number(residual.get("green_magenta")),
         residual_delta_e_2000=number(residual.get("delta_e_2000")),
-        flags=tuple(Counter(text(flag) for flag in listing(record.get("flags")) if text(flag))),
+        flags=tuple(dict.fromkeys(filter(None, map(text, listing(record.get("flags")))))),
         reason=text(correction.get("reason")),
         error=text(error.get("message")),
         hint=text(error.get("hint")),

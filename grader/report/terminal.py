@@ -169,10 +169,8 @@ def _look_lines(shoot: Shoot, *, colour: bool, width: int) -> list[str]:
     look = shoot.to_look_at
     if not look:
         return []
-    lines = [
-        "",
-        _styled(f"Look at {words.count(len(look), 'frame')} by eye, worst doubt first:", _BOLD, colour),
-    ]
+    head = f"Look at {words.count(len(look), 'frame')} by eye, worst doubt first:"
+    lines = ["", *(_styled(line, _BOLD, colour) for line in _wrapped(head, width))]
     doubts = ["  ?" if row.doubt_deg is None else f"{row.doubt_deg:.1f}" for row in look[:_MOST_LOOK]]
     longest = max(columns(row.file) for row in look[:_MOST_LOOK])
     room = max(min(longest, width // 2), _LEAST_NAME)

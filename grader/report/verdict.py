@@ -31,11 +31,13 @@ def headline(shoot: Shoot) -> str:
     done, verb = _done(shoot)
     if done == 0 and failed == total:
         return f"None of the {count(total, 'frame')} could be used."
-    said = (
-        f"All {total} frames are {verb}" if done == total > 1 else f"{done} of {count(total, 'frame')} {verb}"
-    )
+    said = f"{done} of {count(total, 'frame')} {verb}"
+    if done == total:
+        said = f"All {total} frames are {verb}" if total > 1 else f"The frame is {verb}"
     if failed:
         said += f", {failed} failed"
+    if total > done + failed:
+        said += f", {total - done - failed} not done"
     if look:
         return f"{said}; look at {look} by eye."
     return f"{said}; none asks for a look by eye." if not failed else f"{said}."

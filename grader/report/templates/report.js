@@ -232,7 +232,8 @@
   const drawResiduals = (chart, paperWidth) => {
     const { width, starts, before, after } = data.histogram;
     const bars = (counts, name, marker) => ({ type: "bar", name, x: starts.map((start) => start + width / 2), y: counts, width, marker,
-      hovertemplate: `${name}: %{y} frames<extra></extra>` });
+      text: starts.map((start, k) => `${start}${k === starts.length - 1 ? " and more" : " to " + (start + width)}`), textposition: "none",
+      hovertemplate: `${name}, \u0394E 2000 %{text}: %{y} frames<extra></extra>` });
     return Plotly.react(chart, [
       bars(before, "before", { color: ink("sheet"), line: { color: ink("ink"), width: 1.5 }, pattern: { shape: "/", fgcolor: ink("quiet"), bgcolor: ink("sheet"), size: 7 } }),
       bars(after, "after", { color: ink("ink") }),
