@@ -31,6 +31,8 @@ _PLACE_DATASETS: Final = frozenset({26, 27, 90, 92, 95, 100, 101})
 """IPTC-IIM 4.2 record 2: content location, city, sublocation, state, country."""
 _EXIF_VERSION, _COLOUR_SPACE, _WIDTH, _HEIGHT = 0x9000, 0xA001, 0xA002, 0xA003
 _SRGB, _UNCALIBRATED = 1, 65_535
+_CHROMA_PLACE, _CENTRED = 0x0213, 1
+"""YCbCrPositioning, which Exif asks of a JPEG; libjpeg's chroma samples lie centred."""
 
 
 def for_output(frame: Frame, kind: Kind, output: Output, correction: Correction | None = None) -> Metadata:
@@ -56,13 +58,13 @@ def for_output(frame: Frame, kind: Kind, output: Output, correction: Correction 
     notes: list[str] = []
     tree = _tree(frame.metadata.exif, notes)
     _fill_from_header(tree, frame.header)
-    _state(tree, frame)
+    _state(tree, frame, kind)
     if output.strip_location:
         tree.gps = {}
         for tag in _GEO_TAGS:
             tree.ifd0.pop(tag, None)
     packet = _packet(frame.metadata.xmp, notes)
-    _state_xmp(packet, frame)
+    _state_xmp(packet, frame, kind)
     if output.strip_location:
         packet.drop_location()
     if correction is not None:
@@ -127,7 +129,7 @@ def _fraction(value: float) -> tuple[int, int]:
     return min(round(value * 1000), 0xFFFF_FFFF), 1000
 
 
-def _state(tree: Tree, frame: Frame) -> None:
+def _state(tree: Tree, frame: Frame, kind: Kind) -> None:
     """Say in Exif what the written file is."""
     order = tree.order
     tree.ifd0[ORIENTATION] = short_field(frame.header.orientation, order)
@@ -138,6 +140,8 @@ def _state(tree: Tree, frame: Frame) -> None:
     tree.exif[_COLOUR_SPACE] = short_field(_SRGB if srgb else _UNCALIBRATED, order)
     tree.exif[_WIDTH] = long_field(width, order)
     tree.exif[_HEIGHT] = long_field(height, order)
+    if kind == "jpeg":
+        tree.ifd0[_CHROMA_PLACE] = short_field(_CENTRED, order)
     if tree.interop:  # Exif 2.32: R98 = sRGB, R03 = its optional wide space
         name = {"sRGB": b"R98\0", "opRGB": b"R03\0"}.get(frame.space.name)
         if name is None:
@@ -146,7 +150,7 @@ def _state(tree: Tree, frame: Frame) -> None:
             tree.interop[1] = Field(2, 4, name)
 
 
-def _state_xmp(packet: xmp.Packet, frame: Frame) -> None:
+def _state_xmp(packet: xmp.Packet, frame: Frame, kind: Kind) -> None:
     """Keep XMP's copies of Exif values in step; an extension it may name is part of it by now."""
     packet.drop_extension_name()
     height, width = frame.pixels.shape[:2]
@@ -159,6 +163,8 @@ def _state_xmp(packet: xmp.Packet, frame: Frame) -> None:
         (xmp.EXIF, "PixelXDimension", width),
         (xmp.EXIF, "PixelYDimension", height),
         (xmp.EXIF, "ColorSpace", colour),
+        (xmp.DC, "format", f"image/{kind}"),
+        (xmp.PHOTOSHOP, "ICCProfile", frame.space.name),
     ):
         packet.replace(namespace, name, str(value))
 

@@ -51,6 +51,10 @@ def is_raw(path: str | PathLike[str]) -> bool:
             return False
         if head.startswith(_RAW_STARTS) or head[6:14] == b"HEAPCCDR" or head[4:12] == b"ftypcrx ":
             return True
+        if (
+            head[:4] == b"II*\0" and head[8:10] == b"CR"
+        ):  # its preview may be as large as the sensor's picture
+            return True
         if head[:4] not in (b"II*\0", b"MM\0*", b"II+\0", b"MM\0+"):
             return _libraw_size(path) > 0
         return _tiff_is_raw(path, stream)

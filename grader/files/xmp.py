@@ -10,6 +10,7 @@ from xml.parsers import expat
 
 RDF: Final = "http://www.w3.org/1999/02/22-rdf-syntax-ns#"
 META: Final = "adobe:ns:meta/"
+DC: Final = "http://purl.org/dc/elements/1.1/"
 TIFF: Final = "http://ns.adobe.com/tiff/1.0/"
 EXIF: Final = "http://ns.adobe.com/exif/1.0/"
 BASIC: Final = "http://ns.adobe.com/xap/1.0/"
@@ -63,7 +64,7 @@ class Packet:
     """
 
     def __init__(self, data: bytes | None = None) -> None:
-        text = _EMPTY.encode() if data is None else data.strip(b"\0 \t\r\n")
+        text = _EMPTY.encode() if data is None else _in_utf8(data)
         _check(text)
         try:
             self._document = xml.dom.minidom.parseString(text)  # noqa: S318 - checked above
@@ -193,6 +194,13 @@ class Packet:
             if description.hasAttributeNS(RDF, "about"):
                 return str(description.getAttributeNS(RDF, "about"))
         return ""
+
+
+def _in_utf8(data: bytes) -> bytes:
+    """Return a packet without padding, and in UTF-8 where it says by its first bytes that it is UTF-16."""
+    if data[:2] in (b"\xff\xfe", b"\xfe\xff"):
+        data = data.decode("utf-16", "replace").encode("utf-8")
+    return data.strip(b"\0 \t\r\n")
 
 
 def _check(data: bytes) -> None:

@@ -124,6 +124,7 @@ def test_nothing_is_lost_but_what_describes_pixels(sensor_file, tmp_path, kind):
         assert exif_out["Exif.Photo.PixelXDimension"] == str(frame.pixels.shape[1])
         assert iptc_out == iptc
         assert {k: v for k, v in xmp_out.items() if "grader" not in k} == xmp
+        assert ("Exif.Image.YCbCrPositioning" in exif_out) == (suffix == ".jpg")
         own = {k.removeprefix("Xmp.grader."): v for k, v in xmp_out.items() if "grader" in k}
         assert own["FromXY"] == "0.440000 0.410000"
         assert own["Matrix"].split()[8] == "1.700000"
@@ -245,7 +246,7 @@ def test_long_xmp_is_cut_and_joined(tmp_path):
     assert again.count(long.strip().encode()) == 2
     assert b"HasExtendedXMP" not in again
     files.write(files.read(target), tmp_path / "b.png")
-    assert look(tmp_path / "b.png")[2]["Xmp.dc.format"] == "image/jpeg"
+    assert look(tmp_path / "b.png")[2]["Xmp.dc.format"] == "image/png"
 
 
 def test_clipping_paths_are_carried(tmp_path):
@@ -420,6 +421,24 @@ def test_hostile_metadata_end_in_notes():
             frame = Frame(_pixels(), SPACES["sRGB"], Header(**facts), carried)
             out = metadata.for_output(frame, "jpeg", Output(), CORRECTION)
             assert metadata.from_jpeg_info({"exif": out.exif, "xmp": out.xmp})[1].exif is not None
+
+
+def test_hostile_xmp_ends_in_a_note_or_a_packet():
+    rng = np.random.default_rng(12)
+    for _ in range(400):
+        data = bytearray(PACKET)
+        for at in rng.integers(0, len(data), rng.integers(1, 5)):
+            data[at] = rng.choice(np.frombuffer(b"<>&;/:\"'= !x\0\xff\xc3", np.uint8))
+        facts, carried = metadata.from_jpeg_info({"xmp": bytes(data)})
+        assert (carried.xmp is None) == any("XMP" in note for note in facts.get("notes", ()))
+        out = metadata.for_output(_frame(xmp=bytes(data)), "png", Output(strip_location=True), CORRECTION).xmp
+        assert metadata.from_jpeg_info({"xmp": out})[1].xmp == out
+
+
+def test_xmp_in_utf_16():
+    text = PACKET.decode().replace('xmp:Rating="3"', 'xmp:Label="v\u00e1za"')
+    out = metadata.for_output(_frame(xmp=text.encode("utf-16")), "tiff", Output()).xmp
+    assert "v\u00e1za".encode() in out
 
 
 def test_not_bytes_at_all():
