@@ -28,6 +28,7 @@ FLAGS: Final[dict[str, str]] = {
     "two-lights": "two different lights seem to fall on this frame; one correction cannot suit both",
     "high-doubt": "the measurement is less sure than usual; look at this frame by eye",
     "odd-frame": "this frame does not agree with its neighbours",
+    "light-of-stretch": "no light could be measured in this frame itself; the light of its stretch was used",
     "no-time": "no capture time in the file; the file order is used",
     "profile-broken": "the colour profile in the file cannot be used; the default was taken",
     "profile-assumed": "no colour profile in the file; a default was taken",
