@@ -31,7 +31,7 @@ _ROUNDING: Final = _f(5e-7)
 _EDGE: Final = _f(2e-6)  # rounding of the matrix; a value this little outside is not counted as outside
 
 _exact = compiled.jit(error_model="numpy")
-_fast = compiled.jit(fastmath={"contract", "nsz", "arcp", "nnan", "ninf"}, error_model="numpy")
+_fast = compiled.jit(fastmath={"contract", "nsz", "nnan", "ninf"}, error_model="numpy")
 _summing = compiled.jit(fastmath=True)
 
 
@@ -214,7 +214,7 @@ def _keep_highlights(planes: Any, count: int, steps: Steps) -> None:
         blue = blue + maybe * of_z * max(green * (z * per_largest) - blue, _ZERO)
         most = max(of_x, of_y, of_z)
         second = max(min(of_x, of_y), min(max(of_x, of_y), of_z))
-        scale = _ONE + most * (wanted / max(l0 * red + l1 * green + l2 * blue, _TINY) - _ONE)
+        scale = _ONE + maybe * most * (wanted / max(l0 * red + l1 * green + l2 * blue, _TINY) - _ONE)
         greyness = min(red, green, blue) / (max(red, green, blue) + _TINY)
         grey = max(most * _ramp(greyness, one_clipped), second * _ramp(greyness, two_clipped))
         grey = grey * steps.strength
@@ -230,23 +230,31 @@ def _pull_into_gamut(planes: Any, count: int, luminance: Any) -> None:
         red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         low, high = min(red, green, blue), max(red, green, blue)
         bright = l0 * red + l1 * green + l2 * blue
-        held = min(max(bright, _ZERO), _ONE)
-        below = max(bright - low, _ZERO)
-        above = max(high - bright, _ZERO)
-        room = _ONE - held
-        near_top = above * held > below * room
-        scale = min((room if near_top else held) / ((above if near_top else below) + _TINY), _ONE)
-        pull, shift = _ONE - scale, held - bright  # both 0 for colours inside, which stay exactly as they are
-        floor = bright * _ROUNDING if pull > _ZERO else -_HUGE  # what should have become 0 becomes 0
-        red = red + pull * (bright - red) + shift
-        green = green + pull * (bright - green) + shift
-        blue = blue + pull * (bright - blue) + shift
-        planes[i] = red if red > floor else _ZERO
-        planes[_PLANE + i] = green if green > floor else _ZERO
-        planes[2 * _PLANE + i] = blue if blue > floor else _ZERO
         clipped = _ONE if abs(bright - _HALF) > _HALF + _EDGE else _ZERO
         planes[6 * _PLANE + i] = (_ONE if max(-low, high - _ONE) > _EDGE else _ZERO) * (_ONE - clipped)
         planes[7 * _PLANE + i] = clipped
+        # from below black: to grey of the same luminance; what was inside stays exactly as it was (pull 0)
+        below = max(bright - low, _ZERO)
+        held = max(bright, _ZERO)
+        pull = _ONE - min(held / (below + _TINY), _ONE)
+        floor = held * _ROUNDING if pull > _ZERO else -_HUGE  # what should have become 0 becomes 0
+        red, green, blue = (
+            red + pull * (held - red),
+            green + pull * (held - green),
+            blue + pull * (held - blue),
+        )
+        red = red if red > floor else _ZERO
+        green = green if green > floor else _ZERO
+        blue = blue if blue > floor else _ZERO
+        # from above white: first less luminance, then to grey
+        excess = l0 * max(red - _ONE, _ZERO) + l1 * max(green - _ONE, _ZERO) + l2 * max(blue - _ONE, _ZERO)
+        kept = _ONE - excess / max(held, _TINY)
+        red, green, blue, held = kept * red, kept * green, kept * blue, kept * held
+        above = max(max(red, green, blue) - held, _ZERO)
+        pull = _ONE - min(max(_ONE - held, _ZERO) / (above + _TINY), _ONE)
+        planes[i] = red + pull * (held - red)
+        planes[_PLANE + i] = green + pull * (held - green)
+        planes[2 * _PLANE + i] = blue + pull * (held - blue)
 
 
 @_summing

@@ -40,7 +40,7 @@ def keep_highlights(source: Light, light: Light, steps: Steps) -> Light:
        and to the clipped ones of them; red and blue, if clipped, are lifted to green.  (They meet by way of green
        only: red and blue clipped without green are a magenta lamp, not a white one.)  No channel is lifted above
        its share in the file.  Colours that are saturated whatever the clipped channels were stay as they are.
-    2. Luminance goes back to what the file had.
+    2. Luminance goes back to what the file had, coloured lamps apart.
     3. What is nearly grey by now becomes grey, the more so if a second channel is clipped, and the less so the less
        the correction does to white.
 
@@ -56,27 +56,27 @@ def keep_highlights(source: Light, light: Light, steps: Steps) -> Light:
     (N, 3) float64
     """
     clipped = ramp(source, steps.clip)
-    lifted = _lifted(source, light, clipped, steps)
+    largest = light.max(1)
+    or_more = light + clipped * (largest[:, None] - light)
+    maybe_white = ramp(or_more.min(1) / (largest + _TINY), steps.colour)
+    level = np.maximum(or_more[:, ::2].min(1), (clipped * light)[:, ::2].max(1))
+    lifted = _lift(light, maybe_white * clipped.T, level, source / (source.max(1, keepdims=True) + _TINY))
     wanted = source @ np.array(steps.source_luminance, np.float64)
     found = np.maximum(lifted @ np.array(steps.luminance, np.float64), _TINY)
     most, second = clipped.max(1), np.median(clipped, axis=1)
-    scaled = lifted * (1 + most * (wanted / found - 1))[:, None]
+    scaled = lifted * (1 + maybe_white * most * (wanted / found - 1))[:, None]
     greyness = lifted.min(1) / (lifted.max(1) + _TINY)
     grey = np.maximum(most * ramp(greyness, steps.one_clipped), second * ramp(greyness, steps.two_clipped))
     grey *= float(steps.strength)
     return np.asarray(scaled + grey[:, None] * (wanted[:, None] - scaled))
 
 
-def _lifted(source: Light, light: Light, clipped: Light, steps: Steps) -> Light:
-    largest = light.max(1)
-    or_more = light + clipped * (largest[:, None] - light)
-    likeness = or_more.min(1) / (largest + _TINY)
-    share = source / (source.max(1, keepdims=True) + _TINY)
-    (red, green, blue), (of_red, of_green, of_blue) = light.T, ramp(likeness, steps.colour) * clipped.T
-    level = np.maximum(or_more[:, ::2].min(1), (clipped * light)[:, ::2].max(1))
-    green = green + of_green * np.maximum(level * share[:, 1] - green, 0.0)
-    red = red + of_red * np.maximum(green * share[:, 0] - red, 0.0)
-    blue = blue + of_blue * np.maximum(green * share[:, 2] - blue, 0.0)
+def _lift(light: Light, weight: Light, level: Light, share: Light) -> Light:
+    """Lift green to ``level``, then red and blue to green, each by its weight and to its share."""
+    red, green, blue = light.T
+    green = green + weight[1] * np.maximum(level * share[:, 1] - green, 0.0)
+    red = red + weight[0] * np.maximum(green * share[:, 0] - red, 0.0)
+    blue = blue + weight[2] * np.maximum(green * share[:, 2] - blue, 0.0)
     return np.stack([red, green, blue], axis=1)
 
 
@@ -84,17 +84,28 @@ def pull_into_gamut(light: Light, steps: Steps) -> tuple[Light, int, int]:
     """Return light within 0 to 1, and how many pixels were outside by colour and by luminance.
 
     Towards grey of the same luminance, just as far as needed: hue lines stay straight, and what was inside stays as
-    it was.  Only luminance itself is clipped.
+    it was.  A colour that is brighter than white can be first gives up the luminance that cutting off its channels
+    would cost, so that a blue lamp does not turn pale to keep a brightness that no blue can have.
     """
-    luminance = light @ np.array(steps.luminance, np.float64)
-    held = np.clip(luminance, 0.0, 1.0)
-    below = np.maximum(luminance - light.min(1), 0.0)
-    above = np.maximum(light.max(1) - luminance, 0.0)
-    scale = np.minimum(1.0, np.minimum(held / (below + _TINY), (1 - held) / (above + _TINY)))
-    clipped = (luminance < -_EDGE) | (luminance > 1 + _EDGE)
+    weights = np.array(steps.luminance, np.float64)
+    luminance = light @ weights
+    clipped = np.abs(luminance - 0.5) > 0.5 + _EDGE
     outside = ~clipped & ((light.min(1) < -_EDGE) | (light.max(1) > 1 + _EDGE))
-    pulled = held[:, None] + scale[:, None] * (light - luminance[:, None])
-    return pulled, int(outside.sum()), int(clipped.sum())
+
+    below = np.maximum(luminance - light.min(1), 0.0)
+    luminance = np.maximum(luminance, 0.0)
+    light = _towards_grey(np.minimum(luminance / (below + _TINY), 1.0), light, luminance)
+
+    kept = 1 - (np.maximum(light - 1, 0.0) @ weights) / np.maximum(luminance, _TINY)
+    light, luminance = light * kept[:, None], luminance * kept
+    above = np.maximum(light.max(1) - luminance, 0.0)
+    room = np.maximum(1 - luminance, 0.0)
+    light = _towards_grey(np.minimum(room / (above + _TINY), 1.0), light, luminance)
+    return light, int(outside.sum()), int(clipped.sum())
+
+
+def _towards_grey(chroma: Light, light: Light, luminance: Light) -> Light:
+    return np.asarray(luminance[:, None] + chroma[:, None] * (light - luminance[:, None]))
 
 
 def grade(
