@@ -14,10 +14,12 @@ untagged          name of the space that was taken because the file embeds no pr
 compression       TIFF: the tag's number;  predictor, planar (bool), min_is_white (bool), byteorder
                   (``<`` or ``>``), bigtiff (bool), tile ((length, width) or None), rows_per_strip,
                   sample_bytes
-resolution        TIFF: ((x, 1), (y, 1), unit) as stored
+resolution        ((x, n), (y, n), unit) or None: fractions across and down, and their unit: 1 none (a ratio),
+                  2 inch, 3 cm
 quantisation      JPEG: one table of 64 in natural order for each component;  sampling ((h, v), ...),
-                  progressive (bool), stored_rgb (bool), dpi
-pixels_per_metre  PNG: the pHYs chunk;  interlaced (bool), colour_chunks ((type, body), ...)
+                  progressive (bool), stored_rgb (bool), comment
+texts             PNG: text chunks but metadata packets, ((type, body), ...);  interlaced (bool),
+                  colour_chunks ((type, body), ...)
 ================  ==================================================================================
 """
 

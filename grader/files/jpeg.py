@@ -18,6 +18,7 @@ from grader.files import (
     raster_colour,
     raster_depth,
     raster_frame,
+    raster_resolution,
 )
 from grader.model import Frame, Metadata, ReadLimits
 
@@ -76,7 +77,9 @@ def _encoding(image: Any, layout: jpeg_markers.Layout) -> dict[str, Any]:
         "progressive": layout.progressive,
         "stored_rgb": image.info.get("adobe_transform") == 0 and len(layout.components) == 3,
         "comment": image.info.get("comment"),
-        "dpi": image.info.get("dpi") if image.info.get("jfif_unit") else None,
+        "resolution": raster_resolution.from_jfif(
+            image.info.get("jfif_unit", 0), image.info.get("jfif_density", (0, 0))
+        ),
     }
 
 
@@ -94,7 +97,14 @@ def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
         options["icc_profile"] = icc
     options["extra"] = metadata.jpeg_segments(carried)
     Image.fromarray(pixels).save(buffer, "JPEG", **options)
-    return buffer.getvalue()
+    return _with_resolution(buffer.getvalue(), raster_resolution.to_jfif(frame.encoding.get("resolution")))
+
+
+def _with_resolution(data: bytes, density: bytes | None) -> bytes:
+    """Return a JPEG with its JFIF header's unit and densities replaced, if it has that header."""
+    if density is None or data[2:11] != b"\xff\xe0\0\x10JFIF\0":
+        return data
+    return data[:13] + density + data[18:]
 
 
 def _as_source(frame: Frame, *, grey: bool) -> dict[str, Any]:
@@ -102,8 +112,6 @@ def _as_source(frame: Frame, *, grey: bool) -> dict[str, Any]:
     encoding = frame.encoding
     if encoding.get("progressive"):
         options["progressive"] = True
-    if encoding.get("dpi"):
-        options["dpi"] = encoding["dpi"]
     if encoding.get("comment"):
         options["comment"] = encoding["comment"]
     tables = encoding.get("quantisation", ())

@@ -24,6 +24,7 @@ from grader.files import (
     raster,
     raster_depth,
     raster_frame,
+    raster_resolution,
 )
 from grader.files.png_chunks import GREY, GREY_ALPHA, PALETTE, RGBA
 from grader.model import Frame, Metadata, ReadLimits
@@ -66,7 +67,7 @@ def _decoded(data: bytes, layout: png_chunks.Layout) -> raster.Decoded:
     kind: raster.Kind = "grey" if colours == 1 else "rgb"
     encoding = {
         "interlaced": layout.interlaced,
-        "pixels_per_metre": layout.chunks.get(b"pHYs"),
+        "resolution": raster_resolution.from_phys(layout.chunks.get(b"pHYs")),
         "texts": png_text.others(layout),
         "colour_chunks": tuple((k, layout.chunks[k]) for k in png_colour.COLOUR_CHUNKS if k in layout.chunks),
     }
@@ -161,7 +162,8 @@ def _chunks(frame: Frame, icc: bytes | None, carried: Metadata) -> list[tuple[by
         chunks.append((b"iCCP", b"ICC profile\0\0" + zlib.compress(icc, 9)))
     elif frame.encoding.get("untagged") == frame.space.name:
         chunks += frame.encoding.get("colour_chunks", ())
-    if frame.encoding.get("pixels_per_metre"):
-        chunks.append((b"pHYs", frame.encoding["pixels_per_metre"]))
+    resolution = raster_resolution.to_phys(frame.encoding.get("resolution"))
+    if resolution is not None:
+        chunks.append((b"pHYs", resolution))
     chunks += frame.encoding.get("texts", ())
     return chunks + metadata.png_chunks(carried)

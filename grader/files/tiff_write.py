@@ -46,7 +46,7 @@ def write(frame: Frame, path: Path, icc: bytes | None, carried: Metadata) -> tup
             software=False,
             metadata=None,
             maxworkers=1,
-            **_resolution(encoding),
+            **_resolution(frame.encoding),
             **options,
         )
     del data

@@ -120,7 +120,7 @@ def _write_tiff(frame: Frame, temporary: Path, icc: bytes | None, carried: Metad
 
 def _write_jpeg(frame: Frame, temporary: Path, icc: bytes | None, carried: Metadata) -> tuple[str, ...]:
     temporary.write_bytes(jpeg.encode(frame, icc, carried))
-    return ()
+    return () if frame.alpha is None else ("the alpha channel was left out: JPEG has none",)
 
 
 def _write_png(frame: Frame, temporary: Path, icc: bytes | None, carried: Metadata) -> tuple[str, ...]:

@@ -11,11 +11,11 @@ import pytest
 import tifffile
 from PIL import Image, ImageCms
 
-from grader import files
+from grader import files, pixels
 from grader.colour import transfer
 from grader.colour.spaces import SPACES
 from grader.errors import UnsupportedFile
-from grader.model import Frame, Output
+from grader.model import Correction, Frame, Output
 from tests.files import made_profiles
 from tests.files.variants import WIDTH, Variant, all_variants, lab_picture, picture, smooth
 
@@ -110,6 +110,20 @@ def test_a_written_tiff_stores_the_very_same_samples(variant: Variant, tmp_path:
             np.testing.assert_allclose(new.asarray().astype(float), old.asarray().astype(float), rtol=2e-7)
         else:
             np.testing.assert_array_equal(new.asarray(), old.asarray())
+
+
+@named(READ)
+def test_an_identity_correction_returns_the_source_pixels(variant: Variant, tmp_path: Path) -> None:
+    frame = files.read(stored(variant, tmp_path))
+    nothing = Correction(from_xy=None, toward_xy=(0.3127, 0.329), matrix=np.eye(3))
+    graded, counts = pixels.correct(frame, nothing)
+    np.testing.assert_array_equal(graded.pixels, frame.pixels)
+    assert counts.clipped_fraction == counts.out_of_gamut_fraction == 0
+    target = tmp_path / f"out{variant.suffix}"
+    written = files.write(graded, target, correction=nothing)
+    if variant.suffix != ".jpg":
+        np.testing.assert_array_equal(files.read(target).pixels, frame.pixels)
+    assert written.space == frame.space.name
 
 
 # --- other readers --------------------------------------------------------------------------------------
