@@ -145,12 +145,12 @@ def _through_table(plane: Any, table: Any, form: Form) -> None:
     shift, rest = np.uint32(cut), np.uint32((1 << cut) - 1)
     per_step = _ONE / _f(1 << cut)
     first = np.uint32((127 + form.first_octave) << form.octave_bits)
-    lowest = form.lowest
+    lowest, highest = form.lowest, form.highest
     last = np.uint32(table.size - 2)
     bits = np.empty(plane.size, np.uint32)
     sizes = bits.view(np.float32)
     for i in range(plane.size):
-        sizes[i] = max(abs(plane[i]), lowest)
+        sizes[i] = min(max(abs(plane[i]), lowest), highest)
     for i in range(plane.size):
         place = min(np.uint32(bits[i] >> shift) - first, last)
         share = _f(np.int32(bits[i] & rest)) * per_step

@@ -25,7 +25,7 @@ TOLERANCE: Final = 0.02 / 65535
 """A polynomial may be this far from its curve, in encoded units: a fiftieth of a 16-bit step."""
 
 LOWEST_OCTAVE: Final = -60
-HIGHEST_OCTAVE: Final = 17
+HIGHEST_OCTAVE: Final = 40
 _FINEST_BITS: Final = 12
 _FLOAT_TOLERANCE: Final = 2e-7
 _SAMPLES: Final = 2000
@@ -39,8 +39,9 @@ class Form(NamedTuple):
     """Three curves, ready for the loops; what a form does not need is left at zero.
 
     ``POLYNOMIAL``: ``slope * x`` below ``toe``, else the polynomial (lowest power first) in a root of x.
-    ``TABLE``: ``table`` (3, K), or (1, K) where the three curves are one; over codes (``octave_bits`` 0) K is the number of codes, over light each octave
-    from ``lowest``, or ``2**first_octave``, up has ``2**octave_bits`` steps of equal size, between which the loop interpolates.
+    ``TABLE``: ``table`` is (3, K), or (1, K) where the three curves are one.  Over codes (``octave_bits`` 0), K is
+    their number.  Over light, each octave from ``lowest`` (``2**first_octave``) to ``highest`` has
+    ``2**octave_bits`` equal steps, between which the loop interpolates.
     """
 
     kind: int
@@ -51,6 +52,7 @@ class Form(NamedTuple):
     first_octave: int
     octave_bits: int
     lowest: np.float32
+    highest: np.float32
 
 
 _NO_POLYNOMIAL: Final[Coefficients] = (np.float32(0),) * (DEGREE + 1)
@@ -128,7 +130,9 @@ def _is_straight(curve: Curve) -> bool:
 
 
 def _form(kind: int, **parts: Any) -> Form:
-    nothing = Form(kind, _NO_POLYNOMIAL, np.float32(0), np.float32(0), _NO_TABLE, 0, 0, np.float32(0))
+    nothing = Form(
+        kind, _NO_POLYNOMIAL, np.float32(0), np.float32(0), _NO_TABLE, 0, 0, np.float32(0), np.float32(0)
+    )
     return nothing._replace(**parts)
 
 
@@ -202,7 +206,8 @@ def _over_light(keys: tuple[_Key, ...], way: str, up_to_white: bool) -> Form:
     at = octave_steps(first, last, bits)
     table = np.stack([function(at) for function in functions]).astype(np.float32)
     table[:, 0] = [function(np.zeros(1))[0] for function in functions]  # the lowest octave holds zero as well
-    return _form(TABLE, table=table, first_octave=first, octave_bits=bits, lowest=np.float32(at[0]))
+    ends = {"lowest": np.float32(at[0]), "highest": np.float32(at[-1])}
+    return _form(TABLE, table=table, first_octave=first, octave_bits=bits, **ends)
 
 
 def _distinct(keys: tuple[_Key, ...]) -> tuple[_Key, ...]:
