@@ -8,7 +8,6 @@ from __future__ import annotations
 from grader.report.cells import write_csv
 from grader.report.contact import write_contact_sheet
 from grader.report.page import write_html
-from grader.report.records import needs_eye
 from grader.report.terminal import table
 
-__all__ = ["needs_eye", "table", "write_contact_sheet", "write_csv", "write_html"]
+__all__ = ["table", "write_contact_sheet", "write_csv", "write_html"]

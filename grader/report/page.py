@@ -8,6 +8,7 @@ import hashlib
 import json
 import os
 import shlex
+from collections import Counter
 from collections.abc import Iterable, Sequence
 from functools import cache
 from importlib import resources
@@ -20,7 +21,7 @@ from markupsafe import Markup
 from grader.atomic import write_atomic
 from grader.report import charts, verdict, words
 from grader.report.pictures import Thumbnails, UriPair, picture_pairs, spread_evenly
-from grader.report.records import FrameRow, Line, Shoot, listing, mapping, number, text
+from grader.report.records import FrameRow, Line, Shoot, flag_words, listing, mapping, number, text
 from grader.report.recount import read_shoot
 
 BUDGET_BYTES: Final = 6_000_000
@@ -89,6 +90,7 @@ def render_html(records: Iterable[Line], *, thumbnails: Thumbnails | None = None
             answers=verdict.answers(shoot),
             look=look,
             cards=cards,
+            tally=Counter(flag for row in look for flag in row.flags).most_common(),
             open_cards=OPEN_CARDS,
             most_rows=MOST_ROWS,
             failed=[row for row in shoot.frames if row.status == "failed"],
@@ -167,7 +169,8 @@ def _quantiles(shoot: Shoot) -> list[tuple[str, list[float | None]]]:
 def _facts(shoot: Shoot) -> list[tuple[str, str]]:
     """Return the facts of the run, label and value."""
     run, preset = shoot.run, mapping(shoot.run.get("preset"))
-    command = shlex.join(text(part) for part in listing(run.get("command")))
+    parts = [text(part) for part in listing(run.get("command"))]
+    command = shlex.join(parts if parts[:1] in ([], ["grader"]) else ["grader", *parts])
     seconds = number(shoot.summary.get("seconds"))
     facts = [
         ("Command", command),
@@ -208,6 +211,7 @@ def _environment() -> Environment:
         lstrip_blocks=True,
     )
     environment.globals["words"] = words
+    environment.globals["flag_words"] = flag_words
     environment.globals["light_hex"] = charts.light_hex
     return environment
 

@@ -12,24 +12,11 @@ from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from typing import Any, Final
 
-from grader.model import FLAGS, XY
+from grader.model import EYE_FLAGS, FLAGS, XY
 
 Line = Mapping[str, Any]
 
 SCHEMA: Final = "grader-log/1"
-EYE_FLAGS: Final = frozenset(
-    {
-        "few-usable-pixels",
-        "readings-disagree",
-        "coloured-light",
-        "one-coloured",
-        "two-lights",
-        "high-doubt",
-        "odd-frame",
-        "nothing-measured",
-    }
-)
-"""Flags that ask for a look by eye: they speak of the measured light, not of the file."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -127,6 +114,8 @@ class Shoot:
     summary: Line
     notes: tuple[str, ...] = ()
     """What the reader must know about the log itself, in plain words."""
+    beyond: tuple[str, ...] = ()
+    """Files whose light lies further off than the tolerance that was asked for."""
 
     def count(self, status: str) -> int:
         """Return how many frames ended with this status."""
@@ -147,19 +136,6 @@ class Shoot:
                 return name
         name = mapping(mapping(self.run.get("preset")).get("settings")).get("opponent")
         return name if name in {"oklab", "ciecam16", "cielab"} else "oklab"
-
-
-def needs_eye(record: Line) -> bool:
-    """Return whether a log line's frame is to be looked at by eye.
-
-    Examples
-    --------
-    >>> needs_eye({"kind": "frame", "status": "graded", "flags": ["odd-frame"]})
-    True
-    >>> needs_eye({"kind": "frame", "status": "graded", "flags": ["converted"]})
-    False
-    """
-    return _row(record, "A", aware=False, offset_s=0.0).needs_eye
 
 
 @dataclass(slots=True)
@@ -202,17 +178,25 @@ def frame_rows(lines: Lines) -> tuple[FrameRow, ...]:
 
 
 def body_labels(records: Iterable[Line], summary: Line) -> dict[str, str]:
-    """Return a short label for each body: the summary's, else A, B, ... by first appearance."""
+    """Return a short label for each body: the summary's, else A, B, ... by earliest frame."""
     known = [mapping(entry) for entry in listing(summary.get("bodies"))]
     labels = {
         text(entry.get("body")): text(entry.get("label")) for entry in known if text(entry.get("label"))
     }
     free = (_letters(n) for n in range(1_000_000))
-    for record in records:
-        body = text(record.get("body"))
+    for body in _by_first_frame(records):
         if body not in labels:
             labels[body] = next(letters for letters in free if letters not in labels.values())
     return labels
+
+
+def _by_first_frame(records: Iterable[Line]) -> list[str]:
+    """Return the bodies in order of their earliest frames; those without times last, as the log has them."""
+    first: dict[str, float] = {}
+    for record in records:
+        body, clock_s = text(record.get("body")), _clock_s(record.get("taken_at"), aware=False, offset_s=0.0)
+        first[body] = min(first.get(body, math.inf), math.inf if clock_s is None else clock_s)
+    return sorted(first, key=lambda body: first[body])
 
 
 def flag_words(flag: str) -> str:

@@ -68,6 +68,7 @@ def read_shoot(records: Iterable[Line]) -> Shoot:
         bodies=_bodies(rows, lines.summary),
         summary=lines.summary,
         notes=tuple(_notes(lines, rows, again=again)),
+        beyond=tuple(_beyond(lines.summary)),
     )
 
 
@@ -222,6 +223,13 @@ def _body(body: str, label: str, frames: int, entry: Line) -> Body:
     )
 
 
+def _beyond(summary: Line) -> Iterable[str]:
+    for entry in listing(summary.get("beyond_tolerance")):
+        name = text(entry) or text(mapping(entry).get("file"))
+        if name:
+            yield name
+
+
 def _notes(lines: Lines, rows: Sequence[FrameRow], *, again: bool) -> Iterable[str]:
     schema = lines.run.get("schema")
     if not lines.run:
@@ -230,6 +238,8 @@ def _notes(lines: Lines, rows: Sequence[FrameRow], *, again: bool) -> Iterable[s
         yield f"The log says it is of format {text(schema) or 'unknown'}, not {SCHEMA}: some values may be missing."
     if not lines.summary:
         yield "The log has no closing line: the run ended early, or is still going on."
+    elif lines.summary.get("interrupted") is True:
+        yield "The run was interrupted: some frames may not be done yet."
     if again:
         yield "Stretches and drift were counted again for this report, from each frame's own line."
     if lines.unusable:

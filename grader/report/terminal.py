@@ -54,6 +54,7 @@ def table(summary_or_records: Line | Iterable[Line], *, colour: bool, width: int
     )
     lines += _stretch_lines(shoot, colour=colour, width=width)
     lines += _body_lines(shoot, width)
+    lines += _beyond_lines(shoot, width)
     lines += _look_lines(shoot, colour=colour, width=width)
     return "\n".join(lines).rstrip("\n") + "\n"
 
@@ -163,6 +164,14 @@ def _body_lines(shoot: Shoot, width: int) -> list[str]:
         return []
     lines = [f"{body.label}  {words.body_name(body.body)}: {words.body_words(body)}" for body in shoot.bodies]
     return ["", *(part for line in lines for part in _wrapped(line, width))]
+
+
+def _beyond_lines(shoot: Shoot, width: int) -> list[str]:
+    if not shoot.beyond:
+        return []
+    names = [cut(f"  {name}", width) for name in shoot.beyond[:_MOST_LOOK]]
+    more = [f"  and {len(shoot.beyond) - _MOST_LOOK} more"] if len(shoot.beyond) > _MOST_LOOK else []
+    return ["", f"Beyond the tolerance: {words.count(len(shoot.beyond), 'frame')}", *names, *more]
 
 
 def _look_lines(shoot: Shoot, *, colour: bool, width: int) -> list[str]:

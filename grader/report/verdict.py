@@ -2,13 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from itertools import pairwise
 from statistics import fmean
 from typing import NamedTuple
 
 from grader.report.records import Body, Shoot, Stretch, mapping, number
-from grader.report.words import clock, count, drift_figures, drifted, kelvin, signed, span_hours
+from grader.report.words import (
+    JUST_SEEN_MIRED,
+    clock,
+    count,
+    drift_figures,
+    drifted,
+    kelvin,
+    signed,
+    span_hours,
+)
 
 
 class Answer(NamedTuple):
@@ -78,9 +87,15 @@ def _worked(shoot: Shoot) -> Answer:
     if verb == "measured" or after is None:
         words = "Measured only: no picture was changed."
         return Answer(
-            question, "fine", words, f"mean cast, \u0394E 2000: {before:.1f} (1 is just visible)", target
+            question,
+            "fine",
+            words,
+            f"mean cast, \u0394E 2000: {before:.1f} (1 is just visible){_doubt(shoot)}",
+            target,
         )
-    figures = f"mean cast, \u0394E 2000: {before:.1f} \u2192 {after:.1f} (1 is just visible)"
+    figures = (
+        f"mean cast, \u0394E 2000: {before:.1f} \u2192 {after:.1f} by its own measurement{_doubt(shoot)}"
+    )
     missing = len(shoot.frames) - done
     if after > before:
         return Answer(question, "failed", "No: more cast is left than there was.", figures, target)
@@ -88,13 +103,13 @@ def _worked(shoot: Shoot) -> Answer:
         return Answer(
             question, "look", f"Yes, but {count(missing, 'frame')} did not come through.", figures, "look"
         )
-    return Answer(question, "fine", f"Yes: {_less(before, after)}.", figures, target)
+    words = "There was hardly a cast to remove." if before < 1 else "Yes: every frame came through."
+    return Answer(question, "fine", words, figures, target)
 
 
-def _less(before: float, after: float) -> str:
-    if before < 1:
-        return "there was hardly a cast to remove"
-    return f"{round(100 * (1 - after / before))} % of the cast is gone"
+def _doubt(shoot: Shoot) -> str:
+    known = [row.doubt_deg for row in shoot.frames if row.doubt_deg is not None]
+    return f"; mean doubt of a frame {fmean(known):.1f}\u00b0" if known else ""
 
 
 def _changed(shoot: Shoot) -> Answer:
@@ -103,18 +118,23 @@ def _changed(shoot: Shoot) -> Answer:
         return Answer(question, "unknown", "No stretches of light were told apart.", "", "course")
     lights = count(len(shoot.stretches), "stretch", "stretches") + " of light"
     jump = max(_changes(shoot.stretches), key=lambda change: change[0], default=None)
-    if jump is None:
-        return Answer(question, "fine", "It did not: one light throughout.", lights, "course")
+    if jump is None or jump[0] < JUST_SEEN_MIRED:
+        return Answer(question, "fine", "It did not, to the eye: one light throughout.", lights, "course")
     _, earlier, later = jump
     words = f"Most of all at {clock(later.first_taken_at)}; from {kelvin(earlier.cct_k)} to {kelvin(later.cct_k)}."
     return Answer(question, "fine", words, lights, "course")
 
 
-def _changes(stretches: Sequence[Stretch]) -> Iterable[tuple[float, Stretch, Stretch]]:
-    for body in {stretch.body: None for stretch in stretches}:
-        own = [stretch for stretch in stretches if stretch.body == body and stretch.cct_k]
-        for earlier, later in pairwise(own):
-            yield abs(1e6 / (later.cct_k or 1) - 1e6 / (earlier.cct_k or 1)), earlier, later
+def _changes(stretches: Sequence[Stretch]) -> list[tuple[float, Stretch, Stretch]]:
+    """Return the steps from light to light: within each body, or among all where each body saw but one."""
+    lit = [stretch for stretch in stretches if stretch.cct_k]
+    within = [
+        pair
+        for body in dict.fromkeys(stretch.body for stretch in lit)
+        for pair in pairwise([stretch for stretch in lit if stretch.body == body])
+    ]
+    pairs = within or list(pairwise(lit))
+    return [(abs(1e6 / (b.cct_k or 1) - 1e6 / (a.cct_k or 1)), a, b) for a, b in pairs]
 
 
 def _drift(shoot: Shoot) -> Answer:

@@ -34,9 +34,14 @@ def browser():
 
 
 @pytest.fixture(scope="module")
-def source(tmp_path_factory, lines, bank):
+def few(shoots):
+    return shoots.shoot(60)
+
+
+@pytest.fixture(scope="module")
+def source(tmp_path_factory, few, bank):
     file = tmp_path_factory.mktemp("page") / "report.html"
-    file.write_text(render_html(lines, thumbnails=bank), encoding="utf-8")
+    file.write_text(render_html(few, thumbnails=bank), encoding="utf-8")
     return file
 
 
@@ -45,7 +50,7 @@ class Opened:
 
     def __init__(self, browser, file, **options):
         self.said, self.asked = [], []
-        self.context = browser.new_context(**options)
+        self.context = browser.new_context(reduced_motion="reduce", **options)
         self.page = self.context.new_page()
         self.page.on("console", lambda message: self.said.append(message.text))
         self.page.on("pageerror", lambda error: self.said.append(str(error)))
@@ -95,20 +100,21 @@ def test_nothing_is_said_and_nothing_leaves(desktop, phone):
 
 
 @pytest.mark.parametrize("chart", ["course-chart", "plane-chart"])
-def test_hover_tells_the_file_and_a_click_jumps_to_its_pictures(desktop, chart):
+def test_hover_tells_the_file_and_a_click_jumps_to_its_pictures(desktop, few, chart):
     page = desktop.page
     index = page.evaluate("JSON.parse(document.getElementById('data').textContent).frames.eye.lastIndexOf(1)")
-    name = page.evaluate(
-        "index => JSON.parse(document.getElementById('data').textContent).frames.name[index]", index
-    )
     x, y = place_of_point(page, chart, index)
     page.mouse.move(x - 2, y - 2)
     page.mouse.move(x, y)
     page.wait_for_selector(f"#{chart} .hovertext")
     told = page.locator(f"#{chart} .hovertext").first.text_content()
-    assert name in told
-    assert "yellow\u2013blue" in told
+    (line,) = (
+        one for one in few[1:-1] if one["file"].removeprefix("cards/") in told
+    )  # the nearest where marks meet
+    assert f"yellow\u2013blue {line['cast']['yellow_blue']:+.3f}".replace("-", "\u2212") in told
+    assert f"{line['cast']['cct_k']:.0f} K, doubt {line['cast']['doubt_deg']:.1f}°" in told
     page.mouse.click(x, y)
+    name = line["file"].removeprefix("cards/")
     page.wait_for_function("name => document.getElementById('frame-name').textContent === name", arg=name)
     assert page.evaluate("document.activeElement.id") == "frame-name"
     assert page.locator("#frame-pair img").count() == 2
@@ -118,9 +124,9 @@ def test_hover_tells_the_file_and_a_click_jumps_to_its_pictures(desktop, chart):
     page.mouse.move(5, 5)
 
 
-def test_charts_are_drawn_with_the_stretches_named(desktop, lines):
+def test_charts_are_drawn_with_the_stretches_named(desktop, few):
     drawn = desktop.page.locator("#course-chart").text_content()
-    for stretch in lines[-1]["stretches"]:
+    for stretch in few[-1]["stretches"]:
         assert stretch["stretch"] in drawn
     assert "10000 K" in desktop.page.locator("#plane-chart").text_content()
     assert desktop.page.locator("#residual-chart .bars .point").count() > 10

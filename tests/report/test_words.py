@@ -92,5 +92,12 @@ def test_what_cannot_be_told_is_not_told(lines):
 def test_one_light_and_one_body(lines):
     one = lines[-1] | {"stretches": lines[-1]["stretches"][:1]}
     assert "one light throughout" in answer([*lines[:-1], one], "change").words
+    two = lines[-1] | {"stretches": [lines[-1]["stretches"][0], lines[-1]["stretches"][3]]}
+    assert "from 5590 K to 2950 K" in answer([*lines[:-1], two], "change").words
     only = [line for line in lines[:-1] if line.get("body") == lines[1]["body"]]
     assert answer(only, "bodies").words == "There is only one body."
+
+
+def test_files_beyond_the_tolerance(lines):
+    summary = lines[-1] | {"beyond_tolerance": ["cards/A/a.tif", {"file": "cards/B/b.tif"}, 7, None]}
+    assert read_shoot([summary]).beyond == ("cards/A/a.tif", "cards/B/b.tif")

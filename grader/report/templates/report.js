@@ -119,6 +119,7 @@
     font: { family: "system-ui, sans-serif", size: 13, color: ink("ink") },
     hoverlabel: { bgcolor: ink("sheet"), bordercolor: ink("ink"), font: { color: ink("ink") }, align: "left" }, ...extra,
   });
+  const unit = data.opponent === "Oklab" ? 0.03 : 3;
   const CONFIG = { displayModeBar: false, responsive: true, showTips: false };
   const note = (text, x, y, extra) => ({ text, x, y, showarrow: false, font: { color: ink("quiet"), size: 12 }, ...extra });
 
@@ -146,7 +147,8 @@
     data.bodies.forEach((_, body) => {
       const which = indices((i) => frames.body[i] === body && frames.x[i] !== null && frames[column][i] !== null);
       traces.push(points(which, pick("x", which), pick(column, which),
-        { symbol: SYMBOLS[body % 6], size: innerWidth < 700 ? 4 : 6, color: bodyInk(body), opacity: 0.6 }, axes));
+        { symbol: SYMBOLS[body % 6], size: innerWidth < 700 ? 4 : 6, color: bodyInk(body), opacity: 0.6 },
+        { ...axes, error_y: { type: "data", array: which.map((i) => (frames.stretch[i] < 0 ? frames[half][i] : null)), thickness: 1, width: 0, color: bodyInk(body) } }));
     });
     const look = indices((i) => frames.eye[i] && frames.x[i] !== null && frames[column][i] !== null);
     traces.push(points(look, pick("x", look), pick(column, look),
@@ -160,7 +162,8 @@
     const shapes = [], texts = [];
     for (const stretch of data.stretches) {
       if (!stretch.ends) continue;
-      const [from, to] = stretch.ends, lane = data.bodies.length - 1 - stretch.body;
+      const least = (high - low) * 0.002, lane = data.bodies.length - 1 - stretch.body;
+      const [from, to] = [stretch.ends[0] - least, stretch.ends[1] + least];
       shapes.push({ type: "rect", xref: "x", yref: "y3", x0: from, x1: to, y0: lane - 0.4, y1: lane + 0.4,
         fillcolor: stretch.hex, line: { color: ink("quiet"), width: 1 } });
       for (const x of stretch.ends) shapes.push({ type: "line", xref: "x", yref: "paper", x0: x, x1: x, y0: 0, y1: 0.86,
@@ -186,7 +189,8 @@
         title: { text: data.timed ? "capture time" : "frame, in the order of the files", font: { color: ink("quiet") } } }),
       yaxis3: axis({ domain: [0.88, 1], range: [-0.6, data.bodies.length - 0.4], tickvals: data.bodies.map((_, k) => data.bodies.length - 1 - k),
         ticktext: data.bodies.map((body) => plain(body.label)), showgrid: false, zeroline: false }),
-      yaxis: axis({ domain: [0.45, 0.86] }), yaxis2: axis({ domain: [0, 0.41] }),
+      yaxis: axis({ domain: [0.45, 0.86], autorangeoptions: { include: [-unit, unit] } }),
+      yaxis2: axis({ domain: [0, 0.41], autorangeoptions: { include: [-unit, unit] } }),
     }), CONFIG);
   };
 
@@ -217,7 +221,6 @@
     const labels = named.map((stretch) => note(plain(stretch.name), stretch.gm, stretch.yb, { showarrow: true, arrowhead: 0, arrowcolor: ink("quiet"),
       ax: 34, ay: -14, font: { color: ink("ink"), size: 13 }, bgcolor: ink("sheet") }));
     const all = (columns) => columns.flatMap((column) => frames[column]).filter((value) => value !== null);
-    const unit = data.opponent === "Oklab" ? 0.03 : 3;
     const reach = (values) => [Math.min(-unit, ...values) - unit / 2, Math.max(unit, ...values) + unit / 2];
     return Plotly.react(chart, traces, layout({
       width: paperWidth, margin: { l: 56, r: 14, t: 14, b: 48 }, dragmode: false,
