@@ -14,7 +14,7 @@ import tempfile
 import warnings
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any, TypeVar, overload
 
 try:
     import numba
@@ -37,6 +37,12 @@ _Function = TypeVar("_Function", bound=Callable[..., Any])
 _told = False
 
 
+@overload
+def jit(function: _Function) -> _Function: ...
+@overload
+def jit(
+    *, fastmath: bool | set[str] = False, error_model: str = "python"
+) -> Callable[[_Function], _Function]: ...
 def jit(
     function: _Function | None = None, *, fastmath: bool | set[str] = False, error_model: str = "python"
 ) -> Any:
@@ -65,7 +71,11 @@ def jit(
     8
     """
     if function is None:
-        return lambda wrapped: jit(wrapped, fastmath=fastmath, error_model=error_model)
+        return lambda wrapped: _compile(wrapped, fastmath, error_model)
+    return _compile(function, False, "python")
+
+
+def _compile(function: _Function, fastmath: bool | set[str], error_model: str) -> Any:
     if not AVAILABLE:
         return function
     options: dict[str, Any] = {"nogil": True, "fastmath": fastmath, "error_model": error_model}

@@ -104,7 +104,8 @@ class _Key(NamedTuple):
 
     def curve(self) -> Curve:
         samples = np.frombuffer(self.samples, np.float64) if self.samples else None
-        return Curve(*self.parameters, samples=samples)
+        g, a, b, c, d, e, f = self.parameters
+        return Curve(g, a, b, c, d, e, f, samples)
 
 
 def _keys(curves: Curves) -> tuple[_Key, ...]:
