@@ -28,6 +28,8 @@ _TRAILING_BYTES: Final = 16
 _MOST_DC: Final = 3 * 1024 // 2
 """A block's mean lies within 1024 of mid grey, in eighths of a code value (T.81, A.3.3); half as much again is
 left for an encoder's freedom."""
+_MOST_SCANS: Final = 256
+"""Ten is common, some dozens are possible; thousands are there to keep a decoder busy. (judgement)"""
 _HUFFMAN: Final = (0xC0, 0xC1, 0xC2)
 _PROBLEMS: Final = {
     1: "the picture data end early",
@@ -54,6 +56,8 @@ def check(data: bytes, layout: Layout) -> None:
         raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
     if unchecked:
         return
+    if len(layout.scans) > _MOST_SCANS:
+        raise DamagedFile(f"it is coded in {len(layout.scans)} scans, which no camera or editor does")
     if layout.bits not in (8, 12):
         raise DamagedFile("its frame header claims an impossible depth", hint=RECOPY_HINT)
     buffer = np.frombuffer(data, np.uint8)

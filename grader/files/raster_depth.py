@@ -86,4 +86,6 @@ def like(alpha: Pixels, pixels: Pixels) -> Pixels:
         return alpha
     if pixels.dtype == np.uint16:
         return to_sixteen_bits(alpha)
+    if pixels.dtype == np.uint8:
+        return to_eight_bits(alpha)
     return np.asarray(alpha, np.float32)

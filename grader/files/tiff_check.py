@@ -63,10 +63,17 @@ def check(page: Any, file_bytes: int, limits: ReadLimits) -> None:
         The header contradicts itself or the length of the file.
     """
     check_size(page.imagewidth, page.imagelength, limits)
+    _supply_photometric(page)
     _check_kind(page)
     _check_samples(page)
     _check_compression(page)
     _check_segments(page, file_bytes, limits)
+
+
+def _supply_photometric(page: Any) -> None:
+    """Fill in the kind of colours where the tag is missing, by the number of channels, as libtiff does."""
+    if 262 not in page.tags:
+        page.photometric = RGB if page.samplesperpixel - len(page.extrasamples or ()) >= 3 else GREY
 
 
 def _check_kind(page: Any) -> None:
@@ -77,6 +84,8 @@ def _check_kind(page: Any) -> None:
         raise UnsupportedFile(f"its colours are of an unknown kind ({photometric})", hint=CONVERT_HINT)
     if page.imagedepth > 1:
         raise UnsupportedFile("it is a volume, not a photograph", hint=CONVERT_HINT)
+    if photometric == YCBCR and int(page.planarconfig) == 2:
+        raise UnsupportedFile("its luma and chroma are stored in an unusual way", hint=CONVERT_HINT)
     if photometric == CMYK and int(page.tags.valueof(332, 1)) != 1:
         raise UnsupportedFile("its inks are not cyan, magenta, yellow and black", hint=CONVERT_HINT)
 

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from grader.errors import DamagedFile
 from grader.files import tiff_check, tiff_embedded, tiff_ycbcr
 from grader.files.raster import Decoded, Kind
+from grader.files.raster_depth import like, scaled
 
 _BUFFER_BYTES: Final = 8 << 20
 _KINDS: Final[dict[int, Kind]] = {
@@ -24,6 +25,8 @@ _KINDS: Final[dict[int, Kind]] = {
     tiff_check.LAB: "lab",
     tiff_check.ICC_LAB: "lab",
 }
+_LAYERS, _EMPTY_LAYERS = 37724, 64
+"""The tag in which layered files keep what their picture is made of, and the bytes of an empty one. (common practice)"""
 _ALPHA: Final = {0: "unspecified", 1: "associated", 2: "straight"}
 
 
@@ -39,6 +42,10 @@ def decode(page: Any, path: Path) -> Decoded:
     decoded.encoding = encoding(page)
     if alpha is not None:
         decoded.encoding["alpha"] = _ALPHA.get(int((page.extrasamples or (0,))[0]), "unspecified")
+    if len(page.tags.valueof(_LAYERS, b"")) > _EMPTY_LAYERS:
+        decoded.notes.append(
+            "the file holds layers; the picture they make was taken, the layers are not kept"
+        )
     if photometric == tiff_check.GREY_INVERTED:
         decoded.samples = inverted(decoded.samples, bits)
     elif photometric == tiff_check.PALETTE:
@@ -121,6 +128,8 @@ def _look_up(decoded: Decoded, page: Any) -> None:
     elif not np.any(colours & 255):  # others shift them up
         colours = (colours >> 8).astype(np.uint8)
     decoded.samples = colours[indices]
+    if decoded.alpha is not None:
+        decoded.alpha = like(scaled(decoded.alpha, decoded.bits), decoded.samples)
     decoded.bits = 8 * colours.dtype.itemsize
     decoded.flag("converted", "the palette was resolved: written as RGB")
 

@@ -28,30 +28,29 @@ def write(frame: Frame, path: Path, icc: bytes | None, carried: Metadata) -> tup
     encoding = frame.encoding if frame.header.format == "tiff" else {}
     notes: list[str] = []
     data, photometric, alpha = _samples(frame, encoding)
-    options = _layout(data, encoding, notes)
-    options |= _packing(data, frame, encoding, options, notes)
+    fixed: dict[str, Any] = {"photometric": photometric, "iccprofile": icc, **_resolution(frame.encoding)}
+    if alpha is not None:
+        fixed["extrasamples"] = [alpha]
     if encoding.get("planar") and data.ndim == 3:
         data = np.ascontiguousarray(np.moveaxis(data, -1, 0))
-        options["planarconfig"] = "separate"
-    if alpha is not None:
-        options["extrasamples"] = [alpha]
+        fixed["planarconfig"] = "separate"
+    options = _layout(data, encoding, notes)
+    options |= _packing(data, frame, encoding, options, notes)
     big = bool(encoding.get("bigtiff")) or data.nbytes > _BIG_BYTES
-    with tifffile.TiffWriter(
-        path, bigtiff=big, byteorder=encoding.get("byteorder", metadata.byte_order(carried))
-    ) as writer:
-        writer.write(
-            data,
-            photometric=photometric,
-            iccprofile=icc,
-            software=False,
-            metadata=None,
-            maxworkers=1,
-            **_resolution(frame.encoding),
-            **options,
-        )
+    byteorder = encoding.get("byteorder", metadata.byte_order(carried))
+    try:
+        _save(path, data, fixed | options, big=big, byteorder=byteorder)
+    except ValueError:  # a layout that was read but that no writer makes
+        notes.append("its layout cannot be written: deflate in strips was taken")
+        _save(path, data, fixed | _layout(data, {}, notes), big=big, byteorder=byteorder)
     del data
     metadata.write_into_tiff(path, carried)
     return tuple(notes)
+
+
+def _save(path: Path, data: NDArray[Any], options: dict[str, Any], *, big: bool, byteorder: str) -> None:
+    with tifffile.TiffWriter(path, bigtiff=big, byteorder=byteorder) as writer:
+        writer.write(data, software=False, metadata=None, maxworkers=1, **options)
 
 
 def _samples(frame: Frame, encoding: Any) -> tuple[NDArray[Any], str, int | None]:
@@ -114,8 +113,8 @@ def _layout(data: NDArray[Any], encoding: Any, notes: list[str]) -> dict[str, An
         options["compression"] = compression
         if compression in _LEVELS:
             options["compressionargs"] = {"level": _LEVELS[compression]}
-    if compression in _PREDICTABLE and predictor in (2, 3) and (predictor == 2 or data.dtype.kind == "f"):
-        options["predictor"] = predictor
+    if compression in _PREDICTABLE and predictor in (2, 3):
+        options["predictor"] = 2 if data.dtype.kind == "u" else 3
     return options
 
 

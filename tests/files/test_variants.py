@@ -105,7 +105,7 @@ def test_a_written_tiff_stores_the_very_same_samples(variant: Variant, tmp_path:
         old = max(pages, key=lambda p: p.imagewidth)
         new = after.pages[0]
         assert new.bitspersample == old.bitspersample
-        assert new.photometric == old.photometric
+        assert new.photometric == (old.photometric if 262 in old.tags else 2)
         if old.sampleformat == 3 or old.bitspersample > 24:
             np.testing.assert_allclose(new.asarray().astype(float), old.asarray().astype(float), rtol=2e-7)
         else:

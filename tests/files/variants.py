@@ -10,6 +10,7 @@ from __future__ import annotations
 import io
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from functools import partial
 from typing import Any
 
 import imagecodecs
@@ -188,6 +189,13 @@ def _layouts() -> Iterator[Variant]:
         facts = {"resolution": ((3000, 7), (3001, 10), 3)}
         yield Variant(f"tiff {bits} bit resolution", ".tif", make, data, facts=facts)
     yield Variant("tiff reversed bits", ".tif", _reversed_bits(picture(8)), picture(8))
+    data = picture(8)
+    tags = tiff_writer.rgb_tags(WIDTH, HEIGHT)
+    for name, change in (("kind of colours not told", {262: None}), ("depth told once", {258: ("H", (8,))})):
+        make = partial(tiff_writer.tiff, tags | change, [data.tobytes()])
+        yield Variant(f"tiff {name}", ".tif", make, data)
+    make = tiff(picture(16), tile=(128, 128), compression="zstd")
+    yield Variant("tiff tile larger than the picture", ".tif", make, picture(16), facts={"tile": (128, 128)})
     one = picture(16)[:1, :1]
     yield Variant("tiff one pixel", ".tif", tiff(one), one)
 
@@ -260,6 +268,10 @@ def _alphas() -> Iterator[Variant]:
 
 
 def _odd_depths() -> Iterator[Variant]:
+    for bits in (3, 5, 7, 9, 11, 13, 15):
+        data = picture(bits)
+        make = tiff(data, bitspersample=bits)
+        yield Variant(f"tiff {bits} bit packed", ".tif", make, spread(data, bits), facts={"bits": bits})
     for bits in (10, 12, 14):
         data = picture(bits)
         yield Variant(
@@ -308,7 +320,20 @@ def _converted_tiffs() -> Iterator[Variant]:
         yield Variant(f"tiff palette {name}", ".tif", make, colours[indices], fate="converted", flags=flags)
     deep = rng.integers(0, 65536, (3, 256)).astype(np.uint16)
     make = tiff(indices, photometric="palette", colormap=deep)
-    yield Variant("tiff palette of 16 bits", ".tif", make, deep.T[indices], fate="converted", flags=flags)
+    yield Variant(
+        "tiff palette of deep colours", ".tif", make, deep.T[indices], fate="converted", flags=flags
+    )
+    both = np.dstack([indices, alpha_of(indices)])
+    tags = tiff_writer.rgb_tags(WIDTH, HEIGHT) | {
+        258: ("H", (8, 8)),
+        262: ("H", (3,)),
+        277: ("H", (2,)),
+        338: ("H", (2,)),
+        320: ("H", tuple(deep.ravel().tolist())),
+    }
+    make = partial(tiff_writer.tiff, tags, [both.tobytes()])
+    alpha = alpha_of(indices).astype(np.uint16) * 257
+    yield Variant("tiff palette with alpha", ".tif", make, deep.T[indices], alpha, "converted", flags)
     for bits in (8, 16):
         inks = picture(bits, 4)
         make = tiff(inks, photometric="separated", compression="deflate")
@@ -363,8 +388,9 @@ def _codec_tiffs() -> Iterator[Variant]:
         )
     make = tiff(picture(8), compression="webp", compressionargs={"lossless": True})
     yield Variant("tiff 8 bit WebP lossless", ".tif", make, picture(8), facts={"compression": 8})
+    names = {1: "not compressed", 5: "lzw", 8: "deflate"}
     for across, down, code in ((2, 2, 1), (2, 1, 5), (1, 1, 8), (4, 4, 1), (1, 2, 5)):
-        name = f"tiff luma and chroma {across}x{down} compression {code}"
+        name = f"tiff luma and chroma {across}x{down}, {names[code]}"
         yield Variant(
             name, ".tif", tiff_writer.ycbcr(smooth(), across, down, code), facts={"compression": code}
         )
@@ -434,7 +460,7 @@ def _refused_tiffs() -> Iterator[Variant]:
         return Variant(f"tiff {name}", ".tif", make, fate="refused")
 
     grey = picture(8, 1)[..., 0]
-    yield refused("1 bit", tiff(grey > 127, photometric="minisblack"))
+    yield refused("1 bit grey", tiff(grey > 127, photometric="minisblack"))
     yield refused("complex numbers", tiff(grey.astype(np.complex64)))
     five = np.dstack([picture(8), grey, grey])
     yield refused("5 channels", tiff(five, extrasamples=["unspecified", "unspecified"]))
