@@ -19,7 +19,7 @@ from grader.cast import plane, shoot_course, shoot_order, vote
 from grader.cast.correction import correction_for, fixed_correction
 from grader.cast.pins import apply_pins
 from grader.cast.shoot_course import Maps
-from grader.cast.shoot_lights import Match, Stretch, find_lights
+from grader.cast.shoot_lights import Match, Stretch, find_lights, find_matches
 from grader.cast.shoot_odd import oddness
 from grader.cast.shoot_order import Lane
 from grader.cast.shoot_parts import FixedStretch, hosts, parts_of, place_named
@@ -142,6 +142,14 @@ def _frame_lights(found: Sequence[Stretch]) -> dict[int, Array]:
     """Return the light of each frame that is pooled, by its place in the list of casts."""
     pooled = [stretch for stretch in found if stretch.light is not None]
     return {int(row): place for s in pooled for row, place in zip(s.rows, s.places, strict=True)}
+
+
+def compare_bodies(casts: Sequence[Cast], *, clocks: Mapping[str, float] | None = None) -> tuple[Match, ...]:
+    """Return how the bodies of a shoot compare, without planning it; `plan_shoot` has the same in ``matches``."""
+    times_s = shoot_order.capture_times_s(casts, clocks)
+    maps = shoot_course.log_robust(shoot_course.frame_maps(casts))
+    parts = parts_of(casts, shoot_order.lanes_of(casts, times_s), times_s, ())
+    return tuple(find_matches(casts, maps, parts))
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -140,11 +140,11 @@ def follow(log_maps: Maps, log_prior: Array, odds: Array, wander: float) -> Cour
     return Course(mean, variance, jumps, float(np.log(scale).sum() + offset))
 
 
-def pooled(log_sum: Array, log_prior: Array, frames: float, worth: float) -> Array:
+def pooled(log_sum: Array, log_prior: Array, frames: int, worth: float) -> Array:
     """Return the posterior of one light that many frames share.
 
-    Frames of a shoot err together (the same room, the same faces), so that more than ``worth`` of them are
-    worth no more than that many.
+    Frames of a shoot err together (the same room, the same faces), so that all of them are worth no more
+    than ``worth`` independent ones; few frames count double, for what the floor takes from each.
 
     Parameters
     ----------
@@ -152,15 +152,17 @@ def pooled(log_sum: Array, log_prior: Array, frames: float, worth: float) -> Arr
         Sum of the frames' log-maps.
     log_prior : (C,) float64
         Counted once.
-    frames, worth : float
-        How many frames, and how many independent ones they can be worth at most.
+    frames : int
+        How many frames are in the sum.
+    worth : float
+        How many independent frames they can be worth at most.
 
     Returns
     -------
     (C,) float64
         Weights, sum 1.
     """
-    return vote.weights_from_log(log_sum * min(1.0, worth / max(frames, 1.0)) + log_prior)
+    return vote.weights_from_log(log_sum * min(2.0, worth / frames) + log_prior)
 
 
 def log_total(log_weights: Array) -> Array:

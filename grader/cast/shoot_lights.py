@@ -95,12 +95,9 @@ def find_lights(
             line = _Line(part.rows, part.times_s, still)
             found.append(_measured(line, maps, part.referred, part.flash, part.row))
     matches: list[Match] = []
-    groups: dict[tuple[Referred, bool], list[Part]] = {}
-    for part in parts:
-        if part.kind == "pooled":
-            groups.setdefault((part.referred, part.flash), []).append(part)
-    for (referred, flash), group in sorted(groups.items()):
+    for group in _pooled_groups(parts):
         lines = [_Line(part.rows, part.times_s, np.zeros((len(part.rows), 2))) for part in group]
+        referred, flash = group[0].referred, group[0].flash
         if match_bodies and len(group) > 1:
             lines, told = _joined(casts, maps, group, lines)
             matches += told
@@ -108,6 +105,25 @@ def find_lights(
             pieces = _cut(casts, maps, line, referred)
             found += [_measured(piece, maps, referred, flash, -1) for piece in pieces]
     return found, matches
+
+
+def find_matches(casts: Sequence[Cast], maps: Maps, parts: Sequence[Part]) -> list[Match]:
+    """Return how the bodies of a shoot compare; arguments as for `find_lights`."""
+    matches: list[Match] = []
+    for group in _pooled_groups(parts):
+        lines = [_Line(part.rows, part.times_s, np.zeros((len(part.rows), 2))) for part in group]
+        if len(group) > 1:
+            matches += _joined(casts, maps, group, lines)[1]
+    return matches
+
+
+def _pooled_groups(parts: Sequence[Part]) -> list[list[Part]]:
+    """Return the parts of all bodies that could share lights: alike in referral and flash."""
+    groups: dict[tuple[bool, bool], list[Part]] = {}
+    for part in parts:
+        if part.kind == "pooled":
+            groups.setdefault((part.referred == "display", part.flash), []).append(part)
+    return [groups[key] for key in sorted(groups)]
 
 
 def _measured(line: _Line, maps: Maps, referred: Referred, flash: bool, row: int) -> Stretch:
