@@ -9,6 +9,7 @@
     |-- MissingFile          (also OSError)      a path that is not there or cannot be opened
     |-- TooFewUsablePixels                       nothing in the frame can be measured
     |-- WriteFailed          (also OSError)      an output could not be written whole
+    |   `-- DiskFull                             for want of room
     `-- WorkerFailed                             a worker died, hung or ran out of memory
 
 Foreign exceptions are translated once, at the border in ``grader.files``; a batch turns what is
@@ -97,6 +98,12 @@ class WriteFailed(GraderError, OSError):
     """An output could not be written whole; nothing was left behind."""
 
     code = "write-failed"
+
+
+class DiskFull(WriteFailed):
+    """The disk, or this user's share of it, is full: no frame can be written until there is room."""
+
+    code = "disk-full"
 
 
 class WorkerFailed(GraderError):

@@ -16,7 +16,8 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from typing import Final
 
-from grader.errors import DamagedFile, GraderError, MissingFile, UnsupportedFile, WriteFailed
+from grader.atomic import FULL
+from grader.errors import DamagedFile, DiskFull, GraderError, MissingFile, UnsupportedFile, WriteFailed
 
 CONVERT_HINT: Final = "convert it to a 16-bit RGB TIFF first"
 """What to do with a sound file of a kind that grader does not grade."""
@@ -97,7 +98,7 @@ def writing(path: str | os.PathLike[str]) -> Iterator[None]:
 
     Raises
     ------
-    WriteFailed
+    DiskFull, WriteFailed
         With the cause and what to do about it.
     """
     try:
@@ -112,7 +113,8 @@ def writing(path: str | os.PathLike[str]) -> Iterator[None]:
         message, hint = _CANNOT_WRITE.get(
             problem.errno or 0, (f"the file cannot be written ({_words(problem)})", "")
         )
-        raise WriteFailed(message, path=path, hint=hint or None) from problem
+        kind = DiskFull if problem.errno in FULL else WriteFailed
+        raise kind(message, path=path, hint=hint or None) from problem
     except Exception as problem:  # as above, for encoders
         raise WriteFailed(f"the picture cannot be encoded ({_words(problem)})", path=path) from problem
 

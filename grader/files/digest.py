@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import hashlib
+import stat
 from os import PathLike
 from pathlib import Path
 
+from grader.errors import UnsupportedFile
 from grader.files import border
 
 
@@ -16,6 +18,11 @@ def hash_file(path: str | PathLike[str]) -> str:
     ------
     MissingFile
         It is not there or may not be opened.
+    UnsupportedFile
+        It is a pipe, a device or the like, which might never end.
     """
+    with border.reading(Path(path)):
+        if not stat.S_ISREG(Path(path).stat().st_mode):
+            raise UnsupportedFile("it is not a regular file")
     with border.reading(Path(path)), Path(path).open("rb") as stream:
         return hashlib.file_digest(stream, "sha256").hexdigest()

@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-import contextlib
 import hashlib
 import os
-import secrets
 from collections.abc import Callable
 from pathlib import Path
 from typing import Final, Literal
 
+from grader.atomic import whole_file
 from grader.errors import PresetError, WriteFailed
 from grader.files import border, jpeg, metadata, png, profile_build, raster, tiff_write
 from grader.model import Correction, Frame, Header, Metadata, Output, Written
@@ -152,49 +151,9 @@ def _check_target(frame: Frame, place: Path, *, overwrite: bool) -> None:
 def _atomic(
     place: Path, fill: Callable[[Path], tuple[str, ...]], *, overwrite: bool
 ) -> tuple[tuple[str, ...], str, int]:
-    """Fill a temporary file in the target's folder, flush it to disk, and give it its name in one step."""
-    temporary = place.parent / f".grader-{secrets.token_hex(6)}.part"
-    os.close(os.open(temporary, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o666))
-    try:
-        notes = fill(temporary)
-        digest, size = _settle(temporary)
-        _put_in_place(temporary, place, overwrite=overwrite)
-    finally:
-        temporary.unlink(missing_ok=True)
-    _flush_folder(place.parent)
+    """Write the file whole or not at all; return the notes, its digest and size, read back from where it is."""
+    with whole_file(place, overwrite=overwrite) as part:
+        notes = fill(part)
+        with part.open("rb") as stream:
+            digest, size = hashlib.file_digest(stream, "sha256").hexdigest(), stream.tell()
     return notes, digest, size
-
-
-def _settle(temporary: Path) -> tuple[str, int]:
-    """Flush a file to disk and return its digest and size, read back from where it was written."""
-    with temporary.open("rb+") as stream:
-        os.fsync(stream.fileno())
-        digest = hashlib.file_digest(stream, "sha256").hexdigest()
-        return digest, stream.tell()
-
-
-def _put_in_place(temporary: Path, place: Path, *, overwrite: bool) -> None:
-    if overwrite:
-        temporary.replace(place)
-        return
-    try:
-        os.link(temporary, place)  # fails where the name is taken, whoever took it in the meantime
-    except FileExistsError:
-        raise
-    except OSError:  # a file system without links: reserve the name, then replace the reservation
-        os.close(os.open(place, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o666))
-        try:
-            temporary.replace(place)
-        except OSError:
-            place.unlink(missing_ok=True)
-            raise
-
-
-def _flush_folder(folder: Path) -> None:
-    """Make the new name itself safe, where the system allows it (not on Windows)."""
-    with contextlib.suppress(OSError):
-        handle = os.open(folder, os.O_RDONLY)
-        try:
-            os.fsync(handle)
-        finally:
-            os.close(handle)
