@@ -40,11 +40,16 @@ _PROBLEMS: Final = {
 }
 
 
-def check(data: bytes, layout: Layout) -> None:
+def check(data: bytes, layout: Layout) -> bool:
     """Refuse a JPEG whose coded data do not make the whole picture.
 
     Arithmetically coded pictures cannot be checked this way (nearly any bytes are a picture); for them, and for
     the later scans of progressive ones, the end marker counts.
+
+    Returns
+    -------
+    bool
+        True where every code was seen; False where that cannot be done.
 
     Raises
     ------
@@ -55,7 +60,7 @@ def check(data: bytes, layout: Layout) -> None:
     if not layout.ended and (unchecked or layout.progressive):
         raise DamagedFile("the file ends before the picture does", hint=RECOPY_HINT)
     if unchecked:
-        return
+        return False
     if len(layout.scans) > _MOST_SCANS:
         raise DamagedFile(f"it is coded in {len(layout.scans)} scans, which no camera or editor does")
     if layout.bits not in (8, 12):
@@ -73,6 +78,7 @@ def check(data: bytes, layout: Layout) -> None:
         _check_scan(buffer, scan, layout, members, masks, (first, last, high, low))
     if len(seen) < len(layout.components):
         raise DamagedFile("part of its colours is missing", hint=RECOPY_HINT)
+    return True
 
 
 def _scan_header(scan: Scan, layout: Layout) -> tuple[list[int], int, int, int, int]:

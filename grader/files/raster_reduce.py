@@ -99,7 +99,7 @@ def _reduce_floats(
 
 
 @jit
-def _average_integers(pixels, tables, clipped, width, step):  # type: ignore[no-untyped-def]
+def _average_integers(pixels: Any, tables: Any, clipped: int, width: int, step: int) -> Any:
     """Return the mean linear light (h, w, 3) and the state (h, w) of cells: 0 measured, 1 clipped, 2 empty."""
     height_px, width_px = pixels.shape[0], pixels.shape[1]
     h, w = (height_px + width - 1) // width, (width_px + width - 1) // width
@@ -129,7 +129,7 @@ def _average_integers(pixels, tables, clipped, width, step):  # type: ignore[no-
 
 
 @jit
-def _average_floats(encoded, light, clipped, width, step):  # type: ignore[no-untyped-def]
+def _average_floats(encoded: Any, light: Any, clipped: float, width: int, step: int) -> Any:
     """Return the same for floating-point pixels; what is not a number counts as empty."""
     height_px, width_px = light.shape[0], light.shape[1]
     h, w = (height_px + width - 1) // width, (width_px + width - 1) // width
