@@ -28,7 +28,7 @@ from grader.log import (
 from grader.model import Cast, Correction, Fixed, ReadLimits, Recipe
 from grader.preset import Preset, make_preset
 from grader.run import Run, now, open_earlier
-from grader.shootfile import known_lights, read_stretches, resolve_toward
+from grader.shootfile import known_lights, read_stretches, resolve_against, resolve_toward
 from grader.sources import RAW_SUFFIXES, Source, check_target_folder, find_sources, name_targets
 from grader.workers import Outcome, Pool, Stop
 from grader.workers import run as run_jobs
@@ -149,6 +149,7 @@ class Batch:
         self._progress = progress or (lambda _stage, _done, _total: None)
         self.preset = _resolved(preset, self.options.limits)
         self.settings = self.preset.settings
+        self.against = resolve_against(self.options.against, self.options.limits)
         paths = list(paths)
         if self.out is not None:
             check_target_folder(paths, self.out)
@@ -394,7 +395,13 @@ class Batch:
         )
 
     def _close(self) -> None:
-        shoot = casts.shoot_summary(self.casts, self.corrections, self.settings, clocks=self.options.clocks)
+        shoot = casts.shoot_summary(
+            self.casts,
+            self.corrections,
+            self.settings,
+            clocks=self.options.clocks,
+            against=self.against,
+        )
         self.summary = self.run.summarise(interrupted=self.stop.asked, **shoot)
         self.run.finish(self.summary, [source.path for source in self.sources])
 

@@ -1,4 +1,4 @@
-"""Small shoots for the batch's tests: textured scenes under a known light, as files of each kind."""
+"""Small shoots for the batch's tests: packaged photographs under a known light, as files of each kind."""
 
 import io
 from pathlib import Path
@@ -6,9 +6,10 @@ from pathlib import Path
 import numpy as np
 import tifffile
 from PIL import Image
+from skimage import data
 
 from grader.colour.spaces import space_by_name
-from grader.colour.transfer import encode
+from grader.colour.transfer import decode, encode
 from grader.colour.white import linear_from_xy
 
 WARM = (0.40, 0.385)
@@ -17,15 +18,13 @@ NEUTRAL = (0.3127, 0.3290)
 
 
 def scene(seed: int = 1, height: int = 96, width: int = 128) -> np.ndarray:
-    """Return a linear Rec.2020 picture (h, w, 3): many greyish and some coloured patches with edges."""
-    random = np.random.default_rng(seed)
-    cells = random.uniform(0.03, 0.75, (height // 8, width // 8, 1))
-    colour = 1 + random.normal(0, 0.22, (height // 8, width // 8, 3)) * (
-        random.random((height // 8, width // 8, 1)) < 0.4
-    )
-    picture = np.clip(cells * colour, 0.01, 0.9).repeat(8, 0).repeat(8, 1)
-    shade = np.linspace(0.7, 1.0, width)[None, :, None] * (1 + random.normal(0, 0.01, (height, width, 1)))
-    return picture * shade
+    """Return a linear Rec.2020 picture (h, w, 3): a piece of a photograph that scikit-image packages, at half size."""
+    photograph = data.astronaut()
+    srgb = space_by_name("sRGB")
+    top, left = (37 * seed) % 140, (53 * seed) % 200
+    piece = photograph[top : top + 2 * height, left : left + 2 * width, :3] / 255.0
+    linear = decode(srgb.curves[0], piece) @ srgb.rec2020_from_linear.T
+    return np.clip(linear.reshape(height, 2, width, 2, 3).mean(axis=(1, 3)), 0.0, 1.0)
 
 
 def encoded_scene(light_xy: tuple[float, float], seed: int = 1, **size: int) -> np.ndarray:
@@ -33,7 +32,8 @@ def encoded_scene(light_xy: tuple[float, float], seed: int = 1, **size: int) -> 
     light = np.asarray(linear_from_xy(light_xy))
     srgb = space_by_name("sRGB")
     linear = (
-        np.clip(scene(seed, **size) * light / light.max(), 0, 1) @ np.linalg.inv(srgb.rec2020_from_linear).T
+        np.clip(scene(seed, **size) * light / light.max() * 0.9, 0, 1)
+        @ np.linalg.inv(srgb.rec2020_from_linear).T
     )
     return encode(srgb.curves[0], np.clip(linear, 0, 1))
 

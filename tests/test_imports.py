@@ -26,7 +26,7 @@ ALLOWED = {
     "sources": LEAVES,
     "run": LEAVES | {"log"},
     "jobs": LEAVES | {"cast", "colour", "files", "pixels"},
-    "shootfile": LEAVES | {"cast", "colour", "files"},
+    "shootfile": LEAVES | {"cast", "colour", "files", "preset"},
     "reporting": LEAVES | {"files", "log", "pixels", "report"},
     "checking": LEAVES | {"cast", "files", "log", "workers"},
     "exporting": LEAVES | {"cast", "clf", "log", "preset"},

@@ -104,7 +104,7 @@ def summarise(
     *,
     matches: Sequence[Match] = (),
     clocks: Mapping[str, float] | None = None,
-    against_xy: XY | None = None,
+    against: Cast | XY | None = None,
 ) -> ShootSummary:
     """Return what a planned shoot amounts to.
 
@@ -119,8 +119,9 @@ def summarise(
         How bodies compare, from `plan_shoot` or `compare_bodies`.
     clocks : mapping of str to float, optional
         As for `plan`. [s]
-    against_xy : XY, optional
-        Light that every frame is held against; by default that of its stretch.
+    against : Cast or XY, optional
+        Light that every frame is held against, known or as a measured frame shows it; by default that of its
+        stretch.  A measured frame is compared like with like: evidence with evidence, before any pooling.
 
     Returns
     -------
@@ -140,7 +141,7 @@ def summarise(
         group = _Group(name, [casts[k] for k in members], [corrections[k] for k in members], times_s[members])
         stretches.append(_stretch(group, recipe.opponent))
         if recipe.tolerance_delta_e_2000 is not None:
-            beyond += _beyond(group, recipe.tolerance_delta_e_2000, against_xy)
+            beyond += _beyond(group, recipe.tolerance_delta_e_2000, against)
     bodies = _bodies(casts, shoot_order.body_letters(casts, times_s), matches, recipe.opponent)
     return ShootSummary(tuple(stretches), tuple(bodies), tuple(beyond))
 
@@ -151,7 +152,7 @@ def shoot_summary(
     settings: Recipe | Fixed | None = None,
     *,
     clocks: Mapping[str, float] | None = None,
-    against_xy: XY | None = None,
+    against: Cast | XY | None = None,
 ) -> dict[str, Any]:
     """Return the summary of a shoot as plain values for the log's summary line.
 
@@ -160,7 +161,7 @@ def shoot_summary(
     casts, corrections : mapping of str to Cast, Correction
         By file; frames without both are left out.
     settings : Recipe or Fixed, optional
-    clocks, against_xy
+    clocks, against
         As for `summarise`.
 
     Returns
@@ -175,7 +176,7 @@ def shoot_summary(
     matches = (
         compare_bodies(found, clocks=clocks) if several and recipe.match_bodies and recipe.pooling else ()
     )
-    summary = summarise(found, planned, recipe, matches=matches, clocks=clocks, against_xy=against_xy)
+    summary = summarise(found, planned, recipe, matches=matches, clocks=clocks, against=against)
     return {key: list(rows) for key, rows in asdict(summary).items()}
 
 
@@ -252,7 +253,7 @@ def _spread(casts: Sequence[Cast]) -> float | None:
     return float(np.median(_grey_differences(own - np.median(own, axis=0))))
 
 
-def _beyond(group: _Group, tolerance: float, against_xy: XY | None) -> list[Beyond]:
+def _beyond(group: _Group, tolerance: float, against: Cast | XY | None) -> list[Beyond]:
     """Return the frames of a stretch that lie beyond the tolerance.
 
     A frame is held to the light used for it.  Where all frames show the same things, as on a copy stand, it is
@@ -260,11 +261,11 @@ def _beyond(group: _Group, tolerance: float, against_xy: XY | None) -> list[Beyo
     """
     used, even = group.used(), group.even()
     centre = np.median(used[even] if even.any() else used, axis=0)
-    reference = centre if against_xy is None else plane.ab_from_xy(np.array(against_xy))
     measured = np.array([cast.white_xy is not None for cast in group.casts])
+    own = drift.light_series(np.array(group.casts, dtype=object)[measured])[0] if measured.any() else used[:0]
+    reference = _reference(centre, own, against)
     far = _grey_differences(used - reference)
     if measured.any():
-        own = drift.light_series([cast for cast in group.casts if cast.white_xy is not None])[0]
         moved, scatter = own - np.median(own, axis=0), drift.scatter(own)
         witnesses = scatter < _ALIKE and np.linalg.norm(moved, axis=1) > _SIGNIFICANT * scatter
         by_itself = np.where(witnesses, _grey_differences(moved + centre - reference), 0.0)
@@ -274,6 +275,16 @@ def _beyond(group: _Group, tolerance: float, against_xy: XY | None) -> list[Beyo
         for cast, difference in zip(group.casts, far, strict=True)
         if difference > tolerance
     ]
+
+
+def _reference(centre: Array, own: Array, against: Cast | XY | None) -> Array:
+    """Return the place that a stretch is held against, in the terms of the lights used in it."""
+    if against is None:
+        return centre
+    if not isinstance(against, Cast):
+        return np.asarray(plane.ab_from_xy(np.array(against)))
+    shown = drift.light_series([against])[0][0]
+    return np.asarray(centre + shown - np.median(own, axis=0)) if len(own) else np.asarray(shown)
 
 
 def _bodies(

@@ -100,7 +100,9 @@ def _casts(summary: Mapping[str, Any]) -> str:
     if before is None:
         return ""
     text = f"mean cast before: {_cast(before)}"
-    return text if after is None else f"{text}\nmean cast after:  {_cast(after)}"
+    if after is None:
+        return text
+    return f"{text}\nmean cast after:  {_cast(after)}, as single frames measure it"
 
 
 def _cast(cast: Mapping[str, float]) -> str:
