@@ -7,7 +7,7 @@ from pathlib import Path
 
 ROOT = Path(__file__).parents[1] / "grader"
 
-# Each part may import itself and what stands here; docs/DESIGN says why.  `grader/atomic.py` is a leaf.
+# Each part may import itself and what stands here; DEVELOPERS.md draws it.  `grader/atomic.py` is a leaf.
 LEAVES = {"errors", "model", "atomic"}
 ALLOWED = {
     "errors": set(),
