@@ -1,4 +1,4 @@
-"""Interlaced 16-bit PNG: each of the seven passes is a picture of its own, and is decoded as one.
+"""Interlaced PNG of whole bytes: each of the seven passes is a picture of its own, and is decoded as one.
 
 References
 ----------
@@ -32,33 +32,56 @@ _PASSES: Final = (
 
 
 def decode(data: bytes, layout: png_chunks.Layout, channels: int) -> NDArray[Any]:
-    """Return the samples (H, W, channels) of an interlaced 16-bit PNG.
+    """Return the samples (H, W, channels) of an interlaced PNG of 8 or 16 bits.
 
     Raises
     ------
     DamagedFile
         The picture data end early.
     """
-    result = np.empty((layout.height_px, layout.width_px, channels), np.uint16)
+    dtype = np.uint16 if layout.bits == 16 else np.uint8
+    result = np.empty((layout.height_px, layout.width_px, channels), dtype)
     rows = _inflated(data, layout, channels)
     start = 0
     for top, down, left, across in _PASSES:
         part = result[top::down, left::across]
         if not part.size:
             continue
-        size = part.shape[0] * (1 + 2 * channels * part.shape[1])
+        size = part.shape[0] * (1 + layout.bits // 8 * channels * part.shape[1])
         part[:] = _whole(rows[start : start + size], part.shape, layout)
         start += size
     return result
 
 
 def _inflated(data: bytes, layout: png_chunks.Layout, channels: int) -> bytes:
-    needed = 2 * channels * layout.width_px * layout.height_px + 8 * layout.height_px
+    """Return the filtered rows of all passes, after a check that they are all there."""
+    needed = stored_bytes(layout, channels)
     inflater = zlib.decompressobj()
-    rows = inflater.decompress(png_chunks.picture_data(data), needed)
-    if not inflater.eof:
+    rows = inflater.decompress(png_chunks.picture_data(data), needed + 1)
+    if len(rows) < needed or not (inflater.eof or inflater.unconsumed_tail):
         raise DamagedFile("the picture data end early", hint=RECOPY_HINT)
     return rows
+
+
+def stored_bytes(layout: png_chunks.Layout, channels: int) -> int:
+    """Return how many bytes the filtered rows take: each begins with its filter's number."""
+    passes = _PASSES if layout.interlaced else ((0, 1, 0, 1),)
+    total = 0
+    for top, down, left, across in passes:
+        rows, columns = -(-(layout.height_px - top) // down), -(-(layout.width_px - left) // across)
+        if rows > 0 and columns > 0:
+            total += rows * (1 + -(-columns * channels * layout.bits // 8))
+    return total
+
+
+def check_whole(data: bytes, layout: png_chunks.Layout, channels: int) -> None:
+    """Refuse picture data that end early: not every decoder does, where they are interlaced.
+
+    Raises
+    ------
+    DamagedFile
+    """
+    _inflated(data, layout, channels)
 
 
 def _whole(rows: bytes, shape: tuple[int, ...], layout: png_chunks.Layout) -> NDArray[Any]:

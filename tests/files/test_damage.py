@@ -259,6 +259,36 @@ def test_a_directory_that_leads_back_to_itself(tmp_path: Path) -> None:
     np.testing.assert_array_equal(files.read(put(tmp_path, bytes(data))).pixels, picture(8))
 
 
+def test_picture_data_that_end_early_behind_sound_checksums(tmp_path: Path) -> None:
+    for bits in (4, 8, 16):
+        for interlaced in (False, True):
+            data = png(picture(bits, 1)[:20, :20, 0], bits, interlaced=interlaced)()
+            length = int.from_bytes(data[33:37], "big")
+            body, rest = data[41 : 41 + length], data[41 + length + 4 :]
+            for damaged in (
+                body[: length // 2],
+                body[:-4] + b"last",
+                zlib.compress(zlib.decompress(body)[:300]),
+            ):
+                assert rest.endswith(chunk(b"IEND", b""))
+                cut = data[:33] + chunk(b"IDAT", damaged) + chunk(b"IEND", b"")
+                with pytest.raises(DamagedFile):
+                    files.read(put(tmp_path, cut, ".png"))
+
+
+@pytest.mark.parametrize("suffix", [".tif", ".png", ".jpg"])
+def test_the_widest_panoramas(suffix: str, tmp_path: Path) -> None:
+    """65,500 pixels is the most that libjpeg takes."""
+    wide = np.tile(smooth(), (1, 1000, 1))[:8, :65_500]
+    Image.fromarray(wide).save(tmp_path / f"wide{suffix}")
+    frame = files.read(tmp_path / f"wide{suffix}")
+    assert frame.pixels.shape == (8, 65_500, 3)
+    assert files.read_reduced(tmp_path / f"wide{suffix}").pixels.shape[1] <= 600
+    files.write(frame, tmp_path / f"out{suffix}")
+    again = files.read(tmp_path / f"out{suffix}")
+    assert np.abs(again.pixels.astype(int) - frame.pixels).mean() < 2
+
+
 # --- not pictures ---------------------------------------------------------------------------------------
 
 
