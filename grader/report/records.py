@@ -86,6 +86,7 @@ class Stretch:
     largest_jump_deg: float | None = None
     shift_mired: float | None = None
     shift_duv: float | None = None
+    doubt_deg: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -96,8 +97,12 @@ class Body:
     label: str
     frames: int = 0
     offset_to: str | None = None
+    """Label of the body that it is compared with."""
+    is_reference: bool = False
+    """Other bodies are compared with it."""
     yellow_blue: float | None = None
     green_magenta: float | None = None
+    offset_deg: float | None = None
     doubt_deg: float | None = None
     applied: bool | None = None
     shared_stretches: int | None = None
@@ -114,8 +119,8 @@ class Shoot:
     summary: Line
     notes: tuple[str, ...] = ()
     """What the reader must know about the log itself, in plain words."""
-    beyond: tuple[str, ...] = ()
-    """Files whose light lies further off than the tolerance that was asked for."""
+    beyond: tuple[tuple[str, float | None], ...] = ()
+    """Files whose light lies further off than the tolerance that was asked for, and how far (Delta E 2000)."""
 
     def count(self, status: str) -> int:
         """Return how many frames ended with this status."""

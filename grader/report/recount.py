@@ -9,11 +9,12 @@ from __future__ import annotations
 import math
 from collections import Counter
 from collections.abc import Iterable, Sequence
-from dataclasses import fields
+from dataclasses import fields, replace
 from statistics import median
 from typing import Any, Final, NamedTuple
 
-from grader.colour.opponent import cast_from_xy
+from grader.colour.difference import grey_delta_e_2000
+from grader.colour.opponent import cast_from_xy, xy_from_cast
 from grader.colour.white import cct_duv_from_xy
 from grader.errors import GraderError
 from grader.model import XY
@@ -37,6 +38,9 @@ from grader.report.records import (
 _FEWEST_FOR_DRIFT: Final = 3
 _MOST_FOR_DRIFT: Final = 600
 """Theil-Sen looks at all pairs; more frames than this are thinned evenly."""
+
+
+_MOST_FOR_SPREAD: Final = 200
 
 
 class Drift(NamedTuple):
@@ -142,6 +146,8 @@ def _gather(name: str, group: list[FrameRow]) -> Stretch:
         white_xy=white_xy,
         yellow_blue=yellow_blue,
         green_magenta=green_magenta,
+        spread_delta_e_2000=_spread(ordered),
+        doubt_deg=_middle(row.used_doubt_deg for row in ordered),
         drift_mired_per_hour=warm and warm.slope,
         drift_mired_low=warm and warm.low,
         drift_mired_high=warm and warm.high,
@@ -157,6 +163,25 @@ def _drift(rows: Sequence[FrameRow], quantity: str) -> Drift | None:
     pairs = [(row.clock_s, value) for row in rows if (value := getattr(row, quantity)) is not None]
     known = [(clock_s, value) for clock_s, value in pairs if clock_s is not None]
     return theil_sen([clock_s for clock_s, _ in known], [value for _, value in known])
+
+
+def _spread(rows: Sequence[FrameRow]) -> float | None:
+    """Return the median difference of a mid grey between the frames' own lights and their median light."""
+    casts = [
+        (r.yellow_blue, r.green_magenta)
+        for r in rows
+        if r.yellow_blue is not None and r.green_magenta is not None
+    ]
+    casts = casts[:: max(1, math.ceil(len(casts) / _MOST_FOR_SPREAD))]
+    if len(casts) < 2:
+        return None
+    middle = [median(part) for part in zip(*casts, strict=True)]
+    opponent = Shoot({}, tuple(rows), (), (), {}).opponent
+    try:
+        steps = [xy_from_cast(cast[0] - middle[0], cast[1] - middle[1], opponent) for cast in casts]
+    except GraderError:  # too far apart for any light
+        return None
+    return median(grey_delta_e_2000(xy) for xy in steps)
 
 
 def _cast(white_xy: XY | None, rows: Sequence[FrameRow]) -> tuple[float | None, float | None]:
@@ -203,31 +228,39 @@ def _bodies(rows: Sequence[FrameRow], summary: Line) -> tuple[Body, ...]:
     counts = Counter(row.body for row in rows)
     labels = {body: text(entry.get("label")) for body, entry in known.items() if text(entry.get("label"))}
     labels |= {row.body: row.label for row in rows}
-    bodies = [_body(body, label, counts[body], known.get(body, {})) for body, label in labels.items()]
-    return tuple(sorted(bodies, key=lambda body: (len(body.label), body.label)))
+    others = {body: text(known.get(body, {}).get("offset_to")) for body in labels}
+    against = {body: labels.get(other, other) for body, other in others.items()}  # a name, or a label already
+    bodies = [
+        _body(known.get(body, {}), body=body, label=label, frames=counts[body], offset_to=against[body])
+        for body, label in labels.items()
+    ]
+    named = {body.offset_to for body in bodies if body.offset_to != body.label}
+    told = [replace(body, is_reference=body.label in named) for body in bodies]
+    return tuple(sorted(told, key=lambda body: (len(body.label), body.label)))
 
 
-def _body(body: str, label: str, frames: int, entry: Line) -> Body:
+def _body(entry: Line, *, body: str, label: str, frames: int, offset_to: str) -> Body:
     shared = number(entry.get("shared_stretches"))
     applied = entry.get("applied")
     return Body(
         body=body,
         label=label,
         frames=frames,
-        offset_to=text(entry.get("offset_to")) or None,
+        offset_to=offset_to if offset_to != label and offset_to else None,
         yellow_blue=number(entry.get("yellow_blue")),
         green_magenta=number(entry.get("green_magenta")),
+        offset_deg=number(entry.get("offset_deg")),
         doubt_deg=number(entry.get("doubt_deg")),
         applied=applied if isinstance(applied, bool) else None,
         shared_stretches=None if shared is None else int(shared),
     )
 
 
-def _beyond(summary: Line) -> Iterable[str]:
+def _beyond(summary: Line) -> Iterable[tuple[str, float | None]]:
     for entry in listing(summary.get("beyond_tolerance")):
         name = text(entry) or text(mapping(entry).get("file"))
         if name:
-            yield name
+            yield name, number(mapping(entry).get("delta_e_2000"))
 
 
 def _notes(lines: Lines, rows: Sequence[FrameRow], *, again: bool) -> Iterable[str]:

@@ -169,7 +169,9 @@ def _body_lines(shoot: Shoot, width: int) -> list[str]:
 def _beyond_lines(shoot: Shoot, width: int) -> list[str]:
     if not shoot.beyond:
         return []
-    names = [cut(f"  {name}", width) for name in shoot.beyond[:_MOST_LOOK]]
+    names = [
+        cut(f"  {words.plain(far, 1):>4} dE2000  {name}", width) for name, far in shoot.beyond[:_MOST_LOOK]
+    ]
     more = [f"  and {len(shoot.beyond) - _MOST_LOOK} more"] if len(shoot.beyond) > _MOST_LOOK else []
     return ["", f"Beyond the tolerance: {words.count(len(shoot.beyond), 'frame')}", *names, *more]
 

@@ -157,7 +157,7 @@ def _drift(shoot: Shoot) -> Answer:
 
 def _bodies(shoot: Shoot) -> Answer:
     question, target = "Do the bodies agree?", "bodies"
-    others = [body for body in shoot.bodies if body.offset_to is not None and body.offset_to != body.label]
+    others = [body for body in shoot.bodies if body.offset_to is not None]
     if len(shoot.bodies) < 2:
         return Answer(question, "fine", "There is only one body.", "", target)
     known = [body for body in others if body.yellow_blue is not None and body.shared_stretches != 0]
@@ -174,6 +174,8 @@ def _bodies(shoot: Shoot) -> Answer:
 
 
 def _offset_figures(body: Body) -> str:
+    if body.offset_deg is not None:
+        return f"{body.label} measured {body.offset_deg:.1f}\u00b0 apart from {body.offset_to}"
     axes = (
         f"yellow\u2013blue {signed(body.yellow_blue, 4)}, green\u2013magenta {signed(body.green_magenta, 4)}"
     )

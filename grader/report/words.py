@@ -152,7 +152,7 @@ def drift_words(stretch: Stretch) -> str:
     moved = drifted(stretch)
     if moved is None:
         return "too short to tell"
-    return " and ".join(moved) if moved else "steady"
+    return "got " + " and ".join(moved) if moved else "steady"
 
 
 def drifted(stretch: Stretch) -> list[str] | None:
@@ -167,11 +167,11 @@ def drifted(stretch: Stretch) -> list[str] | None:
         stretch.drift_mired_high,
         JUST_SEEN_MIRED / hours,
     ):
-        moved.append("got warmer" if stretch.drift_mired_per_hour > 0 else "got cooler")
+        moved.append("warmer" if stretch.drift_mired_per_hour > 0 else "cooler")
     if _moved(
         stretch.drift_duv_per_hour, stretch.drift_duv_low, stretch.drift_duv_high, JUST_SEEN_DUV / hours
     ):
-        moved.append("got greener" if (stretch.drift_duv_per_hour or 0) > 0 else "got more magenta")
+        moved.append("greener" if (stretch.drift_duv_per_hour or 0) > 0 else "more magenta")
     return moved
 
 
@@ -204,11 +204,9 @@ def body_name(body: str) -> str:
 
 def body_words(body: Body) -> str:
     """Return in words where a body stands against the one it is compared with."""
-    if body.offset_to is None or body.offset_to == body.label or body.yellow_blue is None:
-        return (
-            "the others are compared with it" if body.offset_to == body.label else "nothing to compare with"
-        )
-    if not body.shared_stretches and body.shared_stretches is not None:
+    if body.offset_to is None or body.yellow_blue is None:
+        return "the others are compared with it" if body.is_reference else "nothing to compare with"
+    if body.shared_stretches == 0:
         return f"never shared a light with {body.offset_to}, so nobody can tell"
     hues = hue_words(body.yellow_blue, body.green_magenta or 0.0)
     seen = f"shows the same light more {hues} than {body.offset_to}"

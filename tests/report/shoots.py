@@ -173,19 +173,14 @@ def summary_line(lines: list[Line], **changes: Any) -> Line:
              "last_file": own[-1]["file"], "first_taken_at": own[0]["taken_at"], "last_taken_at": own[-1]["taken_at"],
              "frames": len(own), **{k: v for k, v in _cast(xy).items() if k not in ("mired", "delta_e_2000")},
              "spread_delta_e_2000": float(np.mean([line["residual"]["delta_e_2000"] for line in own])),
-             **slopes, "largest_jump_deg": 0.4, "shift_mired": own[0]["correction"]["shift_mired"],
+             **slopes, "largest_jump_deg": 0.4, "doubt_deg": 0.6, "shift_mired": own[0]["correction"]["shift_mired"],
              "shift_duv": own[0]["correction"]["shift_duv"]}
         )  # fmt: skip
-    offset = {"body": BODIES[1], "label": "B", "offset_to": "A", "yellow_blue": 0.0011, "green_magenta": -0.0068,
-              "doubt_deg": 0.12, "applied": True, "shared_stretches": 4}  # fmt: skip
-    first = offset | {
-        "body": BODIES[0],
-        "label": "A",
-        "yellow_blue": 0.0,
-        "green_magenta": 0.0,
-        "doubt_deg": 0.0,
-        "applied": False,
-    }
+    counts = [sum(line["body"] == body for line in lines) for body in BODIES]
+    first = {"body": BODIES[0], "label": "A", "frames": counts[0], "offset_to": None, "yellow_blue": None,
+             "green_magenta": None, "offset_deg": None, "doubt_deg": None, "applied": None, "shared_stretches": None}  # fmt: skip
+    offset = {"body": BODIES[1], "label": "B", "frames": counts[1], "offset_to": BODIES[0], "yellow_blue": 0.0011,
+              "green_magenta": -0.0068, "offset_deg": 0.62, "doubt_deg": 0.12, "applied": True, "shared_stretches": 4}  # fmt: skip
     return {
         "kind": "summary",
         "frames": len(lines),

@@ -73,22 +73,14 @@ def test_sections_stand_in_the_order_of_what_matters(page):
 
 def test_figures_of_the_page_are_the_logs(page, lines):
     stated = [float(value) for value in page.figures["stretches"]]
-    keys = ("frames", "cct_k", "duv", "yellow_blue", "green_magenta", "spread_delta_e_2000", "drift_mired_per_hour",
-            "drift_mired_low", "drift_mired_high", "drift_duv_per_hour", "drift_duv_low", "drift_duv_high")  # fmt: skip
+    keys = ("frames", "cct_k", "duv", "doubt_deg", "yellow_blue", "green_magenta", "spread_delta_e_2000",
+            "drift_mired_per_hour", "drift_mired_low", "drift_mired_high", "drift_duv_per_hour", "drift_duv_low",
+            "drift_duv_high")  # fmt: skip
     assert stated == [stretch[key] for stretch in lines[-1]["stretches"] for key in keys]
     bodies = [float(value) for value in page.figures["bodies"]]
-    counts = [sum(line.get("body") == body["body"] for line in lines[1:-1]) for body in lines[-1]["bodies"]]
-    assert bodies == [
-        value
-        for body, count in zip(lines[-1]["bodies"], counts, strict=True)
-        for value in (
-            count,
-            body["yellow_blue"],
-            body["green_magenta"],
-            body["doubt_deg"],
-            body["shared_stretches"],
-        )
-    ]
+    keys = ("frames", "yellow_blue", "green_magenta", "offset_deg", "doubt_deg", "shared_stretches")
+    stated = [body[key] for body in lines[-1]["bodies"] for key in keys]
+    assert bodies == [value for value in stated if value is not None]
     flagged = sorted((x for x in lines if x.get("flags")), key=lambda x: -x["cast"]["doubt_deg"])
     look = [float(value) for value in page.figures["look"]]
     assert look == [x["cast"][key] for x in flagged for key in ("doubt_deg", "yellow_blue", "green_magenta")]

@@ -69,7 +69,7 @@ def test_the_answers_hold_the_logs_figures(lines):
     assert f"{before:.1f} → {after:.1f}" in answer(lines, "work").figures
     assert answer(lines, "change").figures == f"{len(summary['stretches'])} stretches of light"
     assert answer(lines, "bodies").words == "No, but B was matched to A."
-    assert answer(lines, "bodies").figures == "B: yellow\u2013blue +0.0011, green\u2013magenta \u22120.0068"
+    assert answer(lines, "bodies").figures == "B measured 0.6\u00b0 apart from A"
     look = sum(bool(line.get("flags")) for line in lines)
     assert answer(lines, "eye").words == f"{look} frames, worst first."
 
@@ -99,5 +99,7 @@ def test_one_light_and_one_body(lines):
 
 
 def test_files_beyond_the_tolerance(lines):
-    summary = lines[-1] | {"beyond_tolerance": ["cards/A/a.tif", {"file": "cards/B/b.tif"}, 7, None]}
-    assert read_shoot([summary]).beyond == ("cards/A/a.tif", "cards/B/b.tif")
+    summary = lines[-1] | {
+        "beyond_tolerance": ["cards/A/a.tif", {"file": "cards/B/b.tif", "delta_e_2000": 2.5}, 7, None]
+    }
+    assert read_shoot([summary]).beyond == (("cards/A/a.tif", None), ("cards/B/b.tif", 2.5))

@@ -131,29 +131,30 @@
   const band = (which, column, half, axes, body) => {
     const x = pick("x", which), middle = pick(column, which), width = pick(half, which);
     const edge = (sign) => middle.map((value, k) => value + sign * width[k]);
-    return [
-      { type: "scatter", mode: "lines", x: [...x, ...[...x].reverse()], y: [...edge(1), ...edge(-1).reverse()],
-        fill: "toself", fillcolor: bodyInk(body) + "2e", line: { width: 0 }, hoverinfo: "skip", ...axes },
-      { type: "scatter", mode: "lines", x, y: middle, line: { color: bodyInk(body), width: 2 }, hoverinfo: "skip", ...axes },
-    ];
+    return { type: "scatter", mode: "lines", x: [...x, ...[...x].reverse()], y: [...edge(1), ...edge(-1).reverse()],
+      fill: "toself", fillcolor: bodyInk(body) + "38", line: { width: 0 }, hoverinfo: "skip", ...axes };
   };
+  const course = (which, column, axes, line) => ({
+    type: "scatter", mode: "lines", x: pick("x", which), y: pick(column, which), line, hoverinfo: "skip", ...axes });
 
   const panel = (column, used, half, axes) => {
-    const traces = [];
+    const traces = [], lines = [];
     data.stretches.forEach((stretch, k) => {
       const which = indices((i) => frames.stretch[i] === k && frames.x[i] !== null && frames[used][i] !== null && frames[half][i] !== null);
-      if (which.length) traces.push(...band(which, used, half, axes, stretch.body));
+      if (!which.length) return;
+      traces.push(band(which, used, half, axes, stretch.body));
+      lines.push(course(which, used, axes, { color: ink("sheet"), width: 5 }), course(which, used, axes, { color: bodyInk(stretch.body), width: 2.5 }));
     });
+    const many = total > 400 || innerWidth < 700;
     data.bodies.forEach((_, body) => {
       const which = indices((i) => frames.body[i] === body && frames.x[i] !== null && frames[column][i] !== null);
       traces.push(points(which, pick("x", which), pick(column, which),
-        { symbol: SYMBOLS[body % 6], size: innerWidth < 700 ? 4 : 6, color: bodyInk(body), opacity: 0.6 },
+        { symbol: SYMBOLS[body % 6], size: many ? 4 : 6, color: bodyInk(body), opacity: many ? 0.4 : 0.6 },
         { ...axes, error_y: { type: "data", array: which.map((i) => (frames.stretch[i] < 0 ? frames[half][i] : null)), thickness: 1, width: 0, color: bodyInk(body) } }));
     });
     const look = indices((i) => frames.eye[i] && frames.x[i] !== null && frames[column][i] !== null);
-    traces.push(points(look, pick("x", look), pick(column, look),
-      { symbol: "circle-open", size: 13, color: ink("look"), line: { width: 2 } }, axes));
-    return traces;
+    const rings = points(look, pick("x", look), pick(column, look), { symbol: "circle-open", size: 13, color: ink("look"), line: { width: 2 } }, axes);
+    return [...traces, ...lines, rings];
   };
 
   const spanShapes = (width) => {
@@ -181,12 +182,11 @@
     const end = (text, y, anchor) => note(text, 0.004, y, { xref: "paper", yref: "paper", xanchor: "left", yanchor: anchor });
     const top = { xaxis: "x", yaxis: "y" }, low = { xaxis: "x", yaxis: "y2" };
     const pauses = data.pauses.map(([begin, length]) => ({ values: [begin], dvalue: length }));
-    shapes.push({ type: "line", xref: "x", yref: "paper", x0: 0, x1: 0, y0: 0, y1: 1, visible: false, line: { color: ink("look"), width: 2 } });
     return Plotly.react(chart, [...panel("yb", "usedYb", "halfYb", top), ...panel("gm", "usedGm", "halfGm", low)], layout({
-      width: paperWidth, margin: { l: 56, r: 14, t: 10, b: 44 }, shapes, dragmode: matchMedia("(pointer: coarse)").matches ? false : "zoom",
+      width: paperWidth, margin: { l: 56, r: 14, t: 10, b: 62 }, shapes, dragmode: matchMedia("(pointer: coarse)").matches ? false : "zoom",
       annotations: [...texts, end("yellow \u2191", 0.86, "top"), end("blue \u2193", 0.45, "bottom"), end("magenta \u2191", 0.41, "top"), end("green \u2193", 0, "bottom")],
       xaxis: axis({ fixedrange: false, type: data.timed ? "date" : "linear", anchor: "y2", tickformat: data.timed ? "%H:%M\n%-d %b" : ",d", rangebreaks: data.timed ? pauses : undefined,
-        title: { text: data.timed ? "capture time" : "frame, in the order of the files", font: { color: ink("quiet") } } }),
+        title: { standoff: 8, text: data.timed ? "capture time" : "frame, in the order of the files", font: { color: ink("quiet") } } }),
       yaxis3: axis({ domain: [0.88, 1], range: [-0.6, data.bodies.length - 0.4], tickvals: data.bodies.map((_, k) => data.bodies.length - 1 - k),
         ticktext: data.bodies.map((body) => plain(body.label)), showgrid: false, zeroline: false }),
       yaxis: axis({ domain: [0.45, 0.86], autorangeoptions: { include: [-unit, unit] } }),
@@ -194,11 +194,12 @@
     }), CONFIG);
   };
 
-  const markCurrent = () => {
-    const chart = $("course-chart");
-    if (!chart.layout || current < 0) return;
-    const last = chart.layout.shapes.length - 1, x = frames.x[current];
-    Plotly.relayout(chart, { [`shapes[${last}].x0`]: x, [`shapes[${last}].x1`]: x, [`shapes[${last}].visible`]: x !== null });
+  const markCurrent = () => {  // a line laid over the chart: drawing the chart anew for each step would be slow
+    const chart = $("course-chart"), axis = chart._fullLayout?.xaxis, cursor = $("cursor");
+    const x = current < 0 ? null : frames.x[current];
+    const at = axis && x !== null ? axis.d2p(x) : NaN;
+    cursor.hidden = !(at >= 0 && at <= axis._length);
+    if (!cursor.hidden) cursor.style.left = `${axis._offset + at}px`;
   };
 
   const drawPlane = (chart, paperWidth) => {
@@ -219,7 +220,7 @@
     traces.push(points(look, pick("gm", look), pick("yb", look), { symbol: "circle-open", size: 14, color: ink("look"), line: { width: 2 } }));
     const named = data.stretches.filter((stretch) => stretch.yb !== null && stretch.gm !== null).slice(0, 24);
     const labels = named.map((stretch) => note(plain(stretch.name), stretch.gm, stretch.yb, { showarrow: true, arrowhead: 0, arrowcolor: ink("quiet"),
-      ax: 34, ay: -14, font: { color: ink("ink"), size: 13 }, bgcolor: ink("sheet") }));
+      ax: stretch.body % 2 ? -36 : 36, ay: stretch.body % 4 < 2 ? -16 : 22, font: { color: ink("ink"), size: 13 }, bgcolor: ink("sheet") }));
     const all = (columns) => columns.flatMap((column) => frames[column]).filter((value) => value !== null);
     const reach = (values) => [Math.min(-unit, ...values) - unit / 2, Math.max(unit, ...values) + unit / 2];
     return Plotly.react(chart, traces, layout({
@@ -256,6 +257,7 @@
       await drawing(chart, paperWidth);
       if (chart.dataset.heard || id === "residual-chart") continue;
       chart.dataset.heard = "yes";
+      if (id === "course-chart") chart.on("plotly_afterplot", markCurrent);
       chart.on("plotly_click", (event) => jumpTo(event.points[0].customdata));
     }
     markCurrent();
