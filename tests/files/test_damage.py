@@ -268,7 +268,7 @@ def test_picture_data_that_end_early_behind_sound_checksums(tmp_path: Path) -> N
             for damaged in (
                 body[: length // 2],
                 body[:-4] + b"last",
-                zlib.compress(zlib.decompress(body)[:300]),
+                zlib.compress(zlib.decompress(body)[:110]),
             ):
                 assert rest.endswith(chunk(b"IEND", b""))
                 cut = data[:33] + chunk(b"IDAT", damaged) + chunk(b"IEND", b"")
