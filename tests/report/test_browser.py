@@ -15,9 +15,7 @@ ARGUMENTS = [
     "--headless", "--no-sandbox", "--disable-gpu", "--disable-background-networking", "--disable-component-update",
     "--disable-sync", "--no-first-run",
 ]  # fmt: skip
-AXE = Path(
-    os.environ.get("AXE_CORE_JS") or Path(tempfile.gettempdir(), "grader-axe", "package", "axe.min.js")
-)
+AXE = Path(os.environ.get("AXE_CORE") or Path(tempfile.gettempdir(), "grader-axe", "package", "axe.min.js"))
 DESKTOP, PHONE = {"width": 1360, "height": 900}, {"width": 390, "height": 844}
 
 pytestmark = pytest.mark.skipif(
@@ -198,7 +196,7 @@ def test_without_scripts_the_figures_still_stand(browser, source):
     context.close()
 
 
-@pytest.mark.skipif(not AXE.exists(), reason="axe-core is not there (npm pack axe-core; set AXE_CORE_JS)")
+@pytest.mark.skipif(not AXE.exists(), reason="axe-core is not there (npm pack axe-core; set AXE_CORE)")
 @pytest.mark.parametrize("which", ["desktop", "phone"])
 def test_no_serious_barrier(request, which):
     page = request.getfixturevalue(which).page

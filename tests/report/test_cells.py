@@ -1,5 +1,6 @@
 import csv
 import io
+from pathlib import Path
 
 import pytest
 
@@ -64,3 +65,9 @@ def test_written_whole_or_not_at_all(tmp_path, lines):
     assert (tmp_path / "frames.csv").read_bytes().decode("utf-8") == csv_text(lines)
     with pytest.raises(WriteFailed):
         write_csv(lines, tmp_path / "nowhere" / "frames.csv")
+
+
+def test_every_column_is_documented():
+    page = (Path(__file__).parents[2] / "docs" / "REPORT.md").read_text(encoding="utf-8")
+    header = next(csv.reader(io.StringIO(csv_text([]))))
+    assert [name for name in header if f"`{name}`" not in page] == []
