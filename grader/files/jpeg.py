@@ -103,21 +103,35 @@ def _encoding(image: Any, layout: jpeg_markers.Layout) -> dict[str, Any]:
     }
 
 
-def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> bytes:
-    """Return the frame as JPEG: the source's quantisation and sampling, or better; else quality 95 and 4:4:4."""
+def encode(frame: Frame, icc: bytes | None, carried: Metadata) -> tuple[bytes, tuple[str, ...]]:
+    """Return the frame as JPEG, and notes on what could not be kept.
+
+    Quantisation and sampling are the source's, or finer; quality 95 and 4:4:4 where the source has none.
+    """
     pixels = raster_depth.to_eight_bits(frame.pixels)
     if raster.is_grey(frame):
         pixels = np.ascontiguousarray(pixels[..., 0])
-    buffer = io.BytesIO()
-    options: dict[str, Any] = {"subsampling": 0, "optimize": True}
+    options: dict[str, Any] = {"subsampling": 0, "extra": metadata.jpeg_segments(carried)}
     options |= _as_source(frame, grey=pixels.ndim == 2)
     if "qtables" not in options:  # beside tables, Pillow would scale them by the quality
         options["quality"] = _DEFAULT_QUALITY
     if icc is not None:
         options["icc_profile"] = icc
-    options["extra"] = metadata.jpeg_segments(carried)
+    notes: tuple[str, ...] = () if frame.alpha is None else ("the alpha channel was left out: JPEG has none",)
+    try:
+        data = _saved(pixels, options)
+    except OSError:  # Pillow's buffer holds two bytes a pixel; only baseline data go through it in pieces
+        if not options.pop("progressive", False):
+            raise
+        data = _saved(pixels, options)
+        notes += ("too much detail for progressive coding here: written as baseline",)
+    return _with_resolution(data, raster_resolution.to_jfif(frame.encoding.get("resolution"))), notes
+
+
+def _saved(pixels: NDArray[Any], options: dict[str, Any]) -> bytes:
+    buffer = io.BytesIO()
     Image.fromarray(pixels).save(buffer, "JPEG", **options)
-    return _with_resolution(buffer.getvalue(), raster_resolution.to_jfif(frame.encoding.get("resolution")))
+    return buffer.getvalue()
 
 
 def _with_resolution(data: bytes, density: bytes | None) -> bytes:

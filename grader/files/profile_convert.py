@@ -21,6 +21,7 @@ from grader.model import Space
 
 _RELATIVE: Final = 1
 _EXACT: Final = 64 | 256  # no cache, no optimisation: every value through the profile itself
+_COLOUR_NAMES: Final = {1: "gray", 3: "rgb", 4: "cmyk"}
 _ROWS: Final = 128
 _AGREEMENT: Final = 4e-3
 """Encoded difference below which matrix and table say the same (one code value in 8 bits)."""
@@ -62,30 +63,27 @@ def wide_from_device(samples: NDArray[Any], icc: bytes) -> NDArray[np.uint16]:
 
 
 def _linear(samples: NDArray[Any], icc: bytes) -> NDArray[np.float32]:
-    names = {1: "gray", 3: "rgb", 4: "cmyk"}
-    samples = np.ascontiguousarray(samples)
-    if samples.shape[2] == 4 and samples.dtype == np.float32:
+    """Return linear Rec.2020 (H, W, 3) of device colours; not clipped."""
+    channels = samples.shape[2]
+    samples = np.ascontiguousarray(samples[..., 0] if channels == 1 else samples)
+    if channels == 4 and samples.dtype == np.float32:
         samples = samples * np.float32(100.0)  # LittleCMS counts inks in percent when they are floats
-    if samples.shape[2] == 1:
-        samples = samples[..., 0]
-        names[samples.shape[-1]] = "gray"
     try:
-        return np.asarray(
-            imagecodecs.cms_transform(
-                samples,
-                icc,
-                profile_bytes("linear Rec.2020"),
-                colorspace="gray" if samples.ndim == 2 else names[samples.shape[2]],
-                planar=False,
-                outcolorspace="rgb",
-                outplanar=False,
-                outdtype="float32",
-                intent=_RELATIVE,
-                flags=_EXACT,
-            )
+        linear = imagecodecs.cms_transform(
+            samples,
+            icc,
+            profile_bytes("linear Rec.2020"),
+            colorspace=_COLOUR_NAMES[channels],
+            planar=False,
+            outcolorspace="rgb",
+            outplanar=False,
+            outdtype="float32",
+            intent=_RELATIVE,
+            flags=_EXACT,
         )
     except (RuntimeError, ValueError) as problem:  # imagecodecs.CmsError is a RuntimeError
         raise ProfileProblem(f"LittleCMS refuses it ({problem})") from problem
+    return np.asarray(linear)
 
 
 def _encoded(linear: NDArray[Any]) -> NDArray[np.float64]:

@@ -43,7 +43,7 @@ def read(path: Path, limits: ReadLimits) -> Frame:
         with tifffile.TiffFile(handle, name=path.name) as tif:
             choice = choose(tif)
             tiff_check.check(choice.page, size, limits)
-            decoded = tiff_pixels.decode(choice.page, path)
+            decoded = tiff_pixels.decode(choice.page)
     if choice.others:
         decoded.flag(
             "page-chosen",

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
@@ -30,7 +29,7 @@ _LAYERS, _EMPTY_LAYERS = 37724, 64
 _ALPHA: Final = {0: "unspecified", 1: "associated", 2: "straight"}
 
 
-def decode(page: Any, path: Path) -> Decoded:
+def decode(page: Any) -> Decoded:
     """Return the samples of a page that `tiff_check.check` let through."""
     samples = _samples(page)
     photometric, bits = int(page.photometric), page.bitspersample
@@ -140,7 +139,7 @@ def _lab(samples: NDArray[Any], bits: int, *, unsigned: bool) -> NDArray[np.floa
     References
     ----------
     .. [1] Adobe, "TIFF Revision 6.0", 1992, section 23 (CIELab: a* and b* signed).
-    .. [2] Adobe, "TIFF Technical Notes for PageMaker 6.0" and Photoshop, 2002 (ICCLab: offset by half).
+    .. [2] Adobe, "TIFF Technical Notes", 1995 and 2002 (ICCLab: a* and b* offset by half).
     """
     if samples.dtype.kind == "f":
         return samples.astype(np.float32)

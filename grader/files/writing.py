@@ -92,7 +92,7 @@ def write(
         _check_target(frame, place, overwrite=overwrite)
         kind = _kind(frame.header, output, place)
         carried = metadata.for_output(frame, kind, output, correction)
-        icc = icc_for(frame)
+        icc = icc_for(frame, kind)
         encode = _ENCODERS[kind]
         notes, digest, size = _atomic(
             place, lambda temporary: encode(frame, temporary, icc, carried), overwrite=overwrite
@@ -100,15 +100,18 @@ def write(
     return Written(str(place), digest, kind, frame.space.name, size, (*carried.notes, *notes))
 
 
-def icc_for(frame: Frame) -> bytes | None:
-    """Return the profile to embed: the source's own, none where the source had none, else one of ours."""
+def icc_for(frame: Frame, kind: Kind) -> bytes | None:
+    """Return the profile to embed: the source's own, else one of ours.
+
+    None where the source embeds none and the output is of the same format, which then means the same.
+    """
     grey = raster.is_grey(frame)
     space = frame.space
     if space.icc is not None:
         if grey or space.icc[16:20] == b"RGB ":
             return space.icc
         return profile_build.build(space)
-    if frame.encoding.get("untagged") == space.name:
+    if frame.encoding.get("untagged") == space.name and kind == frame.header.format:
         return None
     return profile_build.build(space, grey=grey)
 
@@ -118,8 +121,9 @@ def _write_tiff(frame: Frame, temporary: Path, icc: bytes | None, carried: Metad
 
 
 def _write_jpeg(frame: Frame, temporary: Path, icc: bytes | None, carried: Metadata) -> tuple[str, ...]:
-    temporary.write_bytes(jpeg.encode(frame, icc, carried))
-    return () if frame.alpha is None else ("the alpha channel was left out: JPEG has none",)
+    data, notes = jpeg.encode(frame, icc, carried)
+    temporary.write_bytes(data)
+    return notes
 
 
 def _write_png(frame: Frame, temporary: Path, icc: bytes | None, carried: Metadata) -> tuple[str, ...]:

@@ -247,3 +247,42 @@ def test_resolution_goes_along_between_formats(tmp_path: Path) -> None:
 def dpi(path: Path) -> tuple[float, float]:
     with Image.open(path) as image:
         return image.info["dpi"]
+
+
+@pytest.mark.parametrize("progressive", [False, True])
+def test_noise_at_the_finest_tables_is_written(progressive: bool, tmp_path: Path) -> None:
+    """More than two bytes a pixel: Pillow alone fails on such progressive or optimised files."""
+    noise = np.random.default_rng(1).integers(0, 256, (300, 400, 3)).astype(np.uint8)
+    frame = frame_from_array(noise, space="sRGB", linear=False, referred="display")
+    finest = {"quantisation": ((1,) * 64,) * 3, "sampling": ((1, 1),) * 3, "progressive": progressive}
+    written = files.write(replace(frame, encoding=finest), tmp_path / "a.jpg")
+    assert np.abs(files.read(tmp_path / "a.jpg").pixels.astype(int) - noise).max() <= 4
+    assert bool(written.notes) == progressive
+
+
+def test_what_was_assumed_is_embedded_where_another_format_would_assume_otherwise(tmp_path: Path) -> None:
+    light = (picture(16) / 65535).astype(np.float32)
+    tifffile.imwrite(tmp_path / "light.tif", light, photometric="rgb")
+    frame = files.read(tmp_path / "light.tif")
+    for suffix in (".png", ".jpg"):
+        files.write(frame, tmp_path / f"a{suffix}")
+        assert files.read(tmp_path / f"a{suffix}").space.name == "linear Rec.709"
+    files.write(frame, tmp_path / "a.tif")
+    again = files.read(tmp_path / "a.tif")
+    assert again.space.name == "linear Rec.709"
+    assert again.space.icc is None
+
+
+def test_the_optional_space_of_dcf_is_understood(tmp_path: Path) -> None:
+    """Exif interoperability index R03 (CIPA DC-008 and DC-009): opRGB, without any profile."""
+    exif = Image.Exif()
+    exif.get_ifd(0x8769)[0xA001] = 0xFFFF
+    exif.get_ifd(0x8769)[0xA005] = {1: "R03"}
+    Image.fromarray(smooth()).save(tmp_path / "camera.jpg", exif=exif.tobytes())
+    frame = files.read(tmp_path / "camera.jpg")
+    assert frame.space.name == "opRGB"
+    assert not frame.header.flags
+    files.write(frame, tmp_path / "a.jpg")
+    assert files.read(tmp_path / "a.jpg").space.name == "opRGB"
+    files.write(frame, tmp_path / "a.tif")
+    assert files.read(tmp_path / "a.tif").space.icc == files.profile_bytes("opRGB")
