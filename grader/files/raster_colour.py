@@ -15,6 +15,7 @@ from grader.files.raster_depth import scaled
 from grader.model import Metadata, Space
 
 Pixels = NDArray[Any]
+_COLOUR_SPACE: Final = 0xA001
 _FITTING: Final = {"grey": ("GRAY", "RGB"), "rgb": ("RGB",), "cmyk": ("CMYK",), "lab": ("Lab",)}
 """Colours of a profile by the colours of the picture; a grey picture may carry an RGB profile, as its neutral axis."""
 
@@ -33,7 +34,10 @@ def coloured(decoded: Decoded) -> tuple[Pixels, Space]:
         except profile.ProfileProblem as problem:
             _broken(decoded, str(problem))
     space = decoded.space or _assumed(decoded)
-    decoded.encoding["untagged"] = space.name
+    if (
+        decoded.space is None or decoded.format == "png"
+    ):  # PNG's own chunks are written again, Exif is not enough
+        decoded.encoding["untagged"] = space.name
     return pixels, space
 
 
@@ -116,9 +120,10 @@ def _converted(decoded: Decoded, parsed: profile.Parsed | None) -> tuple[Pixels,
 
 
 def space_by_exif(carried: Metadata) -> Space | None:
-    """Return opRGB where Exif says so (DCF's optional colour space, interoperability index R03), else None.
+    """Return opRGB where Exif says so, else None; many cameras say it in no other way.
 
-    Many cameras say it in no other way.
+    Either by the interoperability index R03 (DCF's optional colour space), or by a colour space of 2, which
+    Exif does not define but some cameras write. (common practice)
 
     References
     ----------
@@ -127,7 +132,11 @@ def space_by_exif(carried: Metadata) -> Space | None:
     if carried.exif is None:
         return None
     try:
-        index = metadata_tree.read_tree(io.BytesIO(carried.exif), len(carried.exif)).interop.get(1)
+        tree = metadata_tree.read_tree(io.BytesIO(carried.exif), len(carried.exif))
     except metadata_tree.BrokenStructure:
         return None
-    return SPACES["opRGB"] if metadata_tree.text(index) == "R03" else None
+    stated = tree.exif.get(_COLOUR_SPACE)
+    optional = stated is not None and metadata_tree.numbers(stated, tree.order)[:1] == [2]
+    if optional or metadata_tree.text(tree.interop.get(1)) == "R03":
+        return SPACES["opRGB"]
+    return None

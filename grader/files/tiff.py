@@ -11,7 +11,7 @@ from typing import Any, Final
 import tifffile
 
 from grader.errors import DamagedFile
-from grader.files import metadata, raster_frame, tiff_check, tiff_pixels
+from grader.files import metadata, raster_colour, raster_frame, tiff_check, tiff_pixels
 from grader.files.border import RECOPY_HINT
 from grader.model import Frame, ReadLimits
 
@@ -51,6 +51,8 @@ def read(path: Path, limits: ReadLimits) -> Frame:
             "only that one is written",
         )
     decoded.facts, decoded.metadata = metadata.from_tiff(path, limits)
+    if decoded.samples.dtype.kind == "u":
+        decoded.space = raster_colour.space_by_exif(decoded.metadata)
     return raster_frame.frame_from_decoded(decoded, path, sha256)
 
 

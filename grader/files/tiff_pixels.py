@@ -41,7 +41,7 @@ def decode(page: Any) -> Decoded:
     decoded.encoding = encoding(page)
     if alpha is not None:
         decoded.encoding["alpha"] = _ALPHA.get(int((page.extrasamples or (0,))[0]), "unspecified")
-    if len(page.tags.valueof(_LAYERS, b"")) > _EMPTY_LAYERS:
+    if _LAYERS in page.tags and page.tags[_LAYERS].count > _EMPTY_LAYERS:
         decoded.notes.append(
             "the file holds layers; the picture they make was taken, the layers are not kept"
         )

@@ -273,13 +273,19 @@ def test_what_was_assumed_is_embedded_where_another_format_would_assume_otherwis
     assert again.space.icc is None
 
 
-def test_the_optional_space_of_dcf_is_understood(tmp_path: Path) -> None:
-    """Exif interoperability index R03 (CIPA DC-008 and DC-009): opRGB, without any profile."""
+@pytest.mark.parametrize(
+    ("suffix", "colour_space", "index"), [(".jpg", 0xFFFF, "R03"), (".jpg", 2, None), (".tif", 2, None)]
+)
+def test_the_optional_space_of_dcf_is_understood(
+    suffix: str, colour_space: int, index: str | None, tmp_path: Path
+) -> None:
+    """Exif interoperability index R03 (CIPA DC-008 and DC-009), or colour space 2: opRGB, without any profile."""
     exif = Image.Exif()
-    exif.get_ifd(0x8769)[0xA001] = 0xFFFF
-    exif.get_ifd(0x8769)[0xA005] = {1: "R03"}
-    Image.fromarray(smooth()).save(tmp_path / "camera.jpg", exif=exif.tobytes())
-    frame = files.read(tmp_path / "camera.jpg")
+    exif.get_ifd(0x8769)[0xA001] = colour_space
+    if index is not None:
+        exif.get_ifd(0x8769)[0xA005] = {1: index}
+    Image.fromarray(smooth()).save(tmp_path / f"camera{suffix}", exif=exif.tobytes())
+    frame = files.read(tmp_path / f"camera{suffix}")
     assert frame.space.name == "opRGB"
     assert not frame.header.flags
     files.write(frame, tmp_path / "a.jpg")
