@@ -235,14 +235,11 @@ def _path(g: Any, look: Any, spectra: Any, ray: Any, draw: Any, scratch: Any, ou
 
 
 @jit
-def _render(g: Any, look: Any, spectra: Any, camera: Any, size: Any, window: Any, seed: int) -> Any:
-    width, height = size
-    left, top, right, bottom = window
-    picture = np.zeros((bottom - top, right - left, BANDS), np.float64)
-    scratch = (np.empty(BANDS), np.empty(BANDS))
+def _render(g: Any, look: Any, spectra: Any, camera: Any, frame: Any, scratch: Any, picture: Any) -> None:
+    width, height, left, top, seed = frame
     count = STRATA * STRATA
-    for row in range(top, bottom):
-        for column in range(left, right):
+    for row in range(top, top + picture.shape[0]):
+        for column in range(left, left + picture.shape[1]):
             pixel = mix_bits(np.uint64(seed * 1000003 + row * width + column))
             out = picture[row - top, column - left]
             x = y = 0.0
@@ -253,7 +250,6 @@ def _render(g: Any, look: Any, spectra: Any, camera: Any, size: Any, window: Any
                 ray = _camera_ray(camera, x, y, pair(pixel, sample, 1))
                 _path(g, look, spectra, ray, (pixel, sample), scratch, out)
             out /= count * (1 + x * x + y * y)
-    return picture
 
 
 def render(
@@ -270,5 +266,8 @@ def render(
 
     ``size_px`` is (width, height); ``window`` is (left, top, right, bottom) in pixels, default all.
     """
-    whole = (0, 0, *size_px)
-    return np.asarray(_render(geometry, look, spectra, camera, size_px, window or whole, seed))
+    left, top, right, bottom = window or (0, 0, *size_px)
+    picture = np.zeros((bottom - top, right - left, BANDS))
+    scratch = (np.zeros(BANDS), np.zeros(BANDS))
+    _render(geometry, look, spectra, camera, (*size_px, left, top, seed), scratch, picture)
+    return picture

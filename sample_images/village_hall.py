@@ -106,8 +106,9 @@ class Builder:
         material = self.glaze(glaze, height, seed, bare_foot=kind not in OPEN_KINDS)
         self.revolved.append((at, revolve(kind, height, girth=girth, wall=0.004 + 0.006 * height), material))
         for side in range(HANDLED.get(kind, 0)):
+            glazed = self.glaze(glaze, height, seed, bare_foot=False)
             pieces = handle(kind, height, girth, turn, side=side)
-            self.rods.append([(_plus(at, a), _plus(at, b), radius, material) for a, b, radius in pieces])
+            self.rods.append([(_plus(at, a), _plus(at, b), radius, glazed) for a, b, radius in pieces])
 
     def card(self, at: Point, number: int, *, turn: float = 0.0, size: float = 0.07) -> None:
         """Stand a folded lot card."""
