@@ -1,7 +1,7 @@
 """The compiled loops that grade pixels, in chunks that stay in the processor's nearest cache.
 
-A chunk is some planes of float32 in one flat scratch array: the light (planes 0 to 2), the light as the file had it
-(3 to 5), two flags (6, 7).  The loops are free of branches, so that the compiler makes vector code of them; a whole
+A chunk is some planes of float32 in one flat scratch array: the light (planes 0 to 2), and what the steps hand on to
+each other (3 to 9).  The loops are free of branches, so that the compiler makes vector code of them; a whole
 step is left out where no pixel of the chunk needs it, which changes no result.  What the steps mean stands in
 `grader._pixels_plain`, which does the same without a compiler.
 
@@ -18,9 +18,10 @@ import numpy as np
 
 from grader._pixels_steps import Steps
 from grader.colour import compiled
-from grader.colour.fitted import LINEAR, POLYNOMIAL, Form
+from grader.colour.fitted import RATIONAL, TABLE, Form
 
-CHUNK: Final = 1024
+CHUNK: Final = 512
+_PLANES: Final = 10
 _PLANE: Final = CHUNK + 16  # planes a power of two apart would compete for the same cache lines
 
 _f = np.float32
@@ -41,19 +42,22 @@ def grade(source: Any, target: Any, decode: Form, steps: Steps, encode: Form) ->
 
     ``source`` and ``target`` (3 * N,) may be the same array.
     """
-    planes = np.empty(8 * _PLANE, np.float32)
+    planes = np.zeros(_PLANES * _PLANE, np.float32)
     outside = clipped = 0
     for start in range(0, source.size, 3 * CHUNK):
         count = min(3 * CHUNK, source.size - start) // 3
-        _load(source[start : start + 3 * count], planes, count, decode, steps.code_white)
-        touched = _largest(planes, count) > steps.clip[0]
+        _load(source[start : start + 3 * count], planes, count, decode, steps)
+        touched = _excess(planes, count, steps.clip[0]) > _ZERO
         if touched:
-            planes[3 * _PLANE : 6 * _PLANE] = planes[: 3 * _PLANE]
-        beyond = _multiply(planes, count, steps.matrix, steps.luminance)
+            _remember(planes)
+        beyond = _multiply(planes, count, steps.matrix)
         if touched:
-            _keep_highlights(planes, count, steps)
-        if steps.bounded and (touched or beyond > _ZERO):
-            _pull_into_gamut(planes, count, steps.luminance)
+            _clipping(planes, count, steps)
+            _lift(planes, count, steps)
+            beyond = _make_grey(planes, count, steps)
+        if steps.bounded and beyond > _ZERO:
+            _pull_from_black(planes, count, steps.luminance)
+            _pull_from_white(planes, count, steps.luminance)
             outside += int(_sum(planes[6 * _PLANE : 6 * _PLANE + count]))
             clipped += int(_sum(planes[7 * _PLANE : 7 * _PLANE + count]))
         _store(planes, count, encode, steps, target[start : start + 3 * count])
@@ -61,26 +65,35 @@ def grade(source: Any, target: Any, decode: Form, steps: Steps, encode: Form) ->
 
 
 @_exact
-def _load(source: Any, planes: Any, count: int, form: Form, code_white: Any) -> None:
-    if form.kind == POLYNOMIAL:
-        _load_scaled(source, planes, count, _ONE / code_white)
-        for channel in range(3):
-            _decode_polynomial(planes[channel * _PLANE : channel * _PLANE + count], form)
-    elif form.kind == LINEAR:
-        _load_scaled(source, planes, count, _ONE / code_white)
-    elif form.octave_bits == 0:
+def _load(source: Any, planes: Any, count: int, form: Form, steps: Steps) -> None:
+    if form.kind == TABLE and form.octave_bits == 0:
         _load_codes(source, planes, count, form.table)
+        return
+    if steps.bounded:
+        _load_integers(source, planes, count, _ONE / steps.code_white)
     else:
-        _load_scaled(source, planes, count, _ONE / code_white)
+        _load_floats(source, planes, count)
+    if form.kind == RATIONAL:
+        for channel in range(3):
+            _decode(planes[channel * _PLANE : channel * _PLANE + count], form)
+    elif form.kind == TABLE:
         _through_tables(planes, count, form)
 
 
+@_fast
+def _load_integers(source: Any, planes: Any, count: int, scale: Any) -> None:
+    for i in range(count):
+        planes[i] = _f(source[3 * i]) * scale
+        planes[_PLANE + i] = _f(source[3 * i + 1]) * scale
+        planes[2 * _PLANE + i] = _f(source[3 * i + 2]) * scale
+
+
 @_exact
-def _load_scaled(source: Any, planes: Any, count: int, scale: Any) -> None:
-    """Spread interleaved values over three planes; NaN becomes 0, infinities become huge."""
+def _load_floats(source: Any, planes: Any, count: int) -> None:
+    """Spread values over three planes; NaN becomes 0, infinities become huge."""
     for i in range(count):
         for channel in range(3):
-            value = _f(source[3 * i + channel]) * scale
+            value = _f(source[3 * i + channel])
             value = value if value == value else _ZERO  # noqa: PLR0124 - NaN
             planes[channel * _PLANE + i] = max(min(value, _HUGE), -_HUGE)
 
@@ -97,34 +110,28 @@ def _load_codes(source: Any, planes: Any, count: int, table: Any) -> None:
 
 
 @_fast
-def _polynomial(x: Any, p: Any) -> Any:
-    y = p[8]
-    y = y * x + p[7]
-    y = y * x + p[6]
-    y = y * x + p[5]
-    y = y * x + p[4]
-    y = y * x + p[3]
-    y = y * x + p[2]
-    y = y * x + p[1]
-    return y * x + p[0]
+def _ratio(x: Any, upper: Any, lower: Any) -> Any:
+    over = ((((upper[5] * x + upper[4]) * x + upper[3]) * x + upper[2]) * x + upper[1]) * x + upper[0]
+    under = (((lower[3] * x + lower[2]) * x + lower[1]) * x + lower[0]) * x + _ONE
+    return over / under
 
 
 @_fast
-def _decode_polynomial(plane: Any, form: Form) -> None:
-    p, toe, slope = form.polynomial, form.toe, form.slope
+def _decode(plane: Any, form: Form) -> None:
+    upper, lower, toe, slope = form.upper, form.lower, form.toe, form.slope
     for i in range(plane.size):
         encoded = plane[i]
-        above = _polynomial(np.sqrt(encoded), p)
+        above = _ratio(encoded, upper, lower)
         plane[i] = slope * encoded if encoded < toe else above
 
 
 @_fast
-def _encode_polynomial(plane: Any, form: Form, code_white: Any) -> None:
-    p, toe, slope = form.polynomial, form.toe, form.slope
+def _encode(plane: Any, form: Form) -> None:
+    upper, lower, toe, slope = form.upper, form.lower, form.toe, form.slope
     for i in range(plane.size):
         linear = min(max(plane[i], _ZERO), _ONE)
-        above = _polynomial(np.sqrt(np.sqrt(linear)), p)
-        plane[i] = (slope * linear if linear < toe else above) * code_white
+        above = _ratio(np.sqrt(linear), upper, lower)
+        plane[i] = slope * linear if linear < toe else above
 
 
 @_exact
@@ -159,19 +166,28 @@ def _through_table(plane: Any, table: Any, form: Form) -> None:
         plane[i] = -value if plane[i] < _ZERO else value
 
 
-@_fast
-def _largest(planes: Any, count: int) -> Any:
-    largest = _ZERO
+@_summing
+def _excess(planes: Any, count: int, limit: Any) -> Any:
+    """Return the sum of what is above a limit, 0 if nothing is: a sum becomes vector code, a maximum does not."""
+    total = _ZERO
     for i in range(count):
-        largest = max(largest, planes[i], planes[_PLANE + i], planes[2 * _PLANE + i])
-    return largest
+        total += max(planes[i] - limit, _ZERO)
+        total += max(planes[_PLANE + i] - limit, _ZERO)
+        total += max(planes[2 * _PLANE + i] - limit, _ZERO)
+    return total
 
 
 @_fast
-def _multiply(planes: Any, count: int, matrix: Any, luminance: Any) -> Any:
-    """Apply the matrix; return how far the pixel that is most out of gamut is beyond it."""
+def _remember(planes: Any) -> None:
+    for i in range(3 * _PLANE):
+        planes[3 * _PLANE + i] = planes[i]
+
+
+@_summing
+def _multiply(planes: Any, count: int, matrix: Any) -> Any:
+    """Apply the matrix; return the sum of what came out below black and above white."""
     m00, m01, m02, m10, m11, m12, m20, m21, m22 = matrix
-    beyond = -_ONE
+    beyond = _ZERO
     for i in range(count):
         x, y, z = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         red = m00 * x + m01 * y + m02 * z
@@ -180,51 +196,87 @@ def _multiply(planes: Any, count: int, matrix: Any, luminance: Any) -> Any:
         planes[i] = red
         planes[_PLANE + i] = green
         planes[2 * _PLANE + i] = blue
-        low = min(red, green, blue)
-        high = max(red, green, blue)
-        beyond = max(beyond, -low, high - _ONE)
+        beyond += max(-min(red, green, blue), _ZERO) + max(max(red, green, blue) - _ONE, _ZERO)
     return beyond
 
 
 @_fast
-def _ramp(value: Any, ends: Any) -> Any:
-    share = min(max((value - ends[0]) / (ends[1] - ends[0]), _ZERO), _ONE)
+def _ramp(value: Any, ramp: Any) -> Any:
+    share = min(max((value - ramp[0]) * ramp[1], _ZERO), _ONE)
     return share * share * (_THREE - _TWO * share)
 
 
 @_fast
-def _keep_highlights(planes: Any, count: int, steps: Steps) -> None:
+def _clipping(planes: Any, count: int, steps: Steps) -> None:
+    """Turn planes 3 to 5, the file's light, into how clipped each channel is; its luminance to 6, shares to 7 to 9."""
     s0, s1, s2 = steps.source_luminance
-    l0, l1, l2 = steps.luminance
-    clip, one_clipped, two_clipped = steps.clip, steps.one_clipped, steps.two_clipped
+    clip = steps.clip
     for i in range(count):
-        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         x, y, z = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
-        wanted = s0 * x + s1 * y + s2 * z
-        of_x, of_y, of_z = _ramp(x, clip), _ramp(y, clip), _ramp(z, clip)
-        high = max(red, green, blue)
-        red_or_more, green_or_more = red + of_x * (high - red), green + of_y * (high - green)
-        blue_or_more = blue + of_z * (high - blue)
-        level = min(red_or_more, blue_or_more)
-        maybe = _ramp(min(level, green_or_more) / (high + _TINY), steps.colour)
         per_largest = _ONE / (max(x, y, z) + _TINY)
-        level = max(level, of_x * red, of_z * blue)
-        green = green + maybe * of_y * max(level * (y * per_largest) - green, _ZERO)
-        red = red + maybe * of_x * max(green * (x * per_largest) - red, _ZERO)
-        blue = blue + maybe * of_z * max(green * (z * per_largest) - blue, _ZERO)
-        most = max(of_x, of_y, of_z)
-        second = max(min(of_x, of_y), min(max(of_x, of_y), of_z))
-        scale = _ONE + maybe * most * (wanted / max(l0 * red + l1 * green + l2 * blue, _TINY) - _ONE)
-        greyness = min(red, green, blue) / (max(red, green, blue) + _TINY)
-        grey = max(most * _ramp(greyness, one_clipped), second * _ramp(greyness, two_clipped))
-        grey = grey * steps.strength
-        planes[i] = scale * red + grey * (wanted - scale * red)
-        planes[_PLANE + i] = scale * green + grey * (wanted - scale * green)
-        planes[2 * _PLANE + i] = scale * blue + grey * (wanted - scale * blue)
+        planes[3 * _PLANE + i] = _ramp(x, clip)
+        planes[4 * _PLANE + i] = _ramp(y, clip)
+        planes[5 * _PLANE + i] = _ramp(z, clip)
+        planes[6 * _PLANE + i] = s0 * x + s1 * y + s2 * z
+        planes[7 * _PLANE + i] = x * per_largest
+        planes[8 * _PLANE + i] = y * per_largest
+        planes[9 * _PLANE + i] = z * per_largest
 
 
 @_fast
-def _pull_into_gamut(planes: Any, count: int, luminance: Any) -> None:
+def _lift(planes: Any, count: int, steps: Steps) -> None:
+    """Lift clipped channels; leave how likely a pixel may have been white in plane 7."""
+    colour = steps.colour
+    for i in range(count):
+        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
+        of_red, of_green, of_blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        high = max(red, green, blue)
+        red_or_more, green_or_more = red + of_red * (high - red), green + of_green * (high - green)
+        blue_or_more = blue + of_blue * (high - blue)
+        level = min(red_or_more, blue_or_more)
+        maybe = _ramp(min(level, green_or_more) / (high + _TINY), colour)
+        level = max(level, of_red * red, of_blue * blue)
+        green += maybe * of_green * max(level * planes[8 * _PLANE + i] - green, _ZERO)
+        planes[i] = red + maybe * of_red * max(green * planes[7 * _PLANE + i] - red, _ZERO)
+        planes[_PLANE + i] = green
+        planes[2 * _PLANE + i] = blue + maybe * of_blue * max(green * planes[9 * _PLANE + i] - blue, _ZERO)
+        planes[7 * _PLANE + i] = maybe
+
+
+@_summing
+def _make_grey(planes: Any, count: int, steps: Steps) -> Any:
+    """Restore luminance and make nearly grey pixels grey; return what is beyond black and white as `_multiply`."""
+    l0, l1, l2 = steps.luminance
+    one_clipped, two_clipped, strength = steps.one_clipped, steps.two_clipped, steps.strength
+    beyond = _ZERO
+    for i in range(count):
+        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
+        of_red, of_green, of_blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        wanted, maybe = planes[6 * _PLANE + i], planes[7 * _PLANE + i]
+        most = max(of_red, of_green, of_blue)
+        second = max(min(of_red, of_green), min(max(of_red, of_green), of_blue))
+        greyness = min(red, green, blue) / (max(red, green, blue) + _TINY)
+        grey = strength * max(most * _ramp(greyness, one_clipped), second * _ramp(greyness, two_clipped))
+        change = maybe * most * (wanted / max(l0 * red + l1 * green + l2 * blue, _TINY) - _ONE)
+        red, green, blue = red + change * red, green + change * green, blue + change * blue
+        red, green, blue = (
+            red + grey * (wanted - red),
+            green + grey * (wanted - green),
+            blue + grey * (wanted - blue),
+        )
+        planes[i] = red
+        planes[_PLANE + i] = green
+        planes[2 * _PLANE + i] = blue
+        beyond += max(-min(red, green, blue), _ZERO) + max(max(red, green, blue) - _ONE, _ZERO)
+    return beyond
+
+
+@_fast
+def _pull_from_black(planes: Any, count: int, luminance: Any) -> None:
+    """Pull colours with negative channels to grey of their luminance; what is inside stays exactly as it is.
+
+    Planes 6 and 7 become flags of what is out of gamut, and of what is too bright for it.
+    """
     l0, l1, l2 = luminance
     for i in range(count):
         red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
@@ -233,20 +285,26 @@ def _pull_into_gamut(planes: Any, count: int, luminance: Any) -> None:
         clipped = _ONE if abs(bright - _HALF) > _HALF + _EDGE else _ZERO
         planes[6 * _PLANE + i] = (_ONE if max(-low, high - _ONE) > _EDGE else _ZERO) * (_ONE - clipped)
         planes[7 * _PLANE + i] = clipped
-        # from below black: to grey of the same luminance; what was inside stays exactly as it was (pull 0)
-        below = max(bright - low, _ZERO)
         held = max(bright, _ZERO)
-        pull = _ONE - min(held / (below + _TINY), _ONE)
+        pull = _ONE - min(held / (max(bright - low, _ZERO) + _TINY), _ONE)
         floor = held * _ROUNDING if pull > _ZERO else -_HUGE  # what should have become 0 becomes 0
         red, green, blue = (
             red + pull * (held - red),
             green + pull * (held - green),
             blue + pull * (held - blue),
         )
-        red = red if red > floor else _ZERO
-        green = green if green > floor else _ZERO
-        blue = blue if blue > floor else _ZERO
-        # from above white: first less luminance, then to grey
+        planes[i] = red if red > floor else _ZERO
+        planes[_PLANE + i] = green if green > floor else _ZERO
+        planes[2 * _PLANE + i] = blue if blue > floor else _ZERO
+
+
+@_fast
+def _pull_from_white(planes: Any, count: int, luminance: Any) -> None:
+    """Take from colours above white the luminance that cutting them off would cost, then pull them to grey."""
+    l0, l1, l2 = luminance
+    for i in range(count):
+        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
+        held = l0 * red + l1 * green + l2 * blue
         excess = l0 * max(red - _ONE, _ZERO) + l1 * max(green - _ONE, _ZERO) + l2 * max(blue - _ONE, _ZERO)
         kept = _ONE - excess / max(held, _TINY)
         red, green, blue, held = kept * red, kept * green, kept * blue, kept * held
@@ -267,19 +325,17 @@ def _sum(flags: Any) -> Any:
 
 @_exact
 def _store(planes: Any, count: int, form: Form, steps: Steps, target: Any) -> None:
-    white = steps.code_white
-    rounding = _HALF if steps.bounded else _ZERO
-    if form.kind == POLYNOMIAL:
+    if form.kind == RATIONAL:
         for channel in range(3):
-            _encode_polynomial(planes[channel * _PLANE : channel * _PLANE + count], form, white)
-        white = _ONE
-    elif form.kind != LINEAR:
+            _encode(planes[channel * _PLANE : channel * _PLANE + count], form)
+    elif form.kind == TABLE:
         _through_tables(planes, count, form)
-    _store_codes(planes, count, target, white, rounding)
+    _store_codes(planes, count, target, steps.code_white, _HALF if steps.bounded else _ZERO)
 
 
 @_fast
 def _store_codes(planes: Any, count: int, target: Any, scale: Any, rounding: Any) -> None:
     for i in range(count):
-        for channel in range(3):
-            target[3 * i + channel] = planes[channel * _PLANE + i] * scale + rounding
+        target[3 * i] = planes[i] * scale + rounding
+        target[3 * i + 1] = planes[_PLANE + i] * scale + rounding
+        target[3 * i + 2] = planes[2 * _PLANE + i] * scale + rounding

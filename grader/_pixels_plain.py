@@ -24,9 +24,10 @@ _HUGE: Final = 1e30
 _EDGE: Final = 2e-6
 
 
-def ramp(values: Light, ends: tuple[Any, Any]) -> Light:
-    """Return the smooth step (cubic Hermite) from 0 at the first end to 1 at the second."""
-    share = np.clip((values - float(ends[0])) / (float(ends[1]) - float(ends[0])), 0.0, 1.0)
+def ramp(values: Light, start_and_steepness: tuple[Any, Any]) -> Light:
+    """Return the smooth step (cubic Hermite) from 0 at the start to 1 after a distance of 1 / steepness."""
+    start, steepness = map(float, start_and_steepness)
+    share = np.clip((values - start) * steepness, 0.0, 1.0)
     return np.asarray(share * share * (3 - 2 * share))
 
 

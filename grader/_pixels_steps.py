@@ -23,7 +23,7 @@ TWO_CLIPPED_RAMP: Final = (0.10, 0.70)
 """And with two clipped channels, which tell less of a colour."""
 STRENGTH_RAMP: Final = (0.0, 0.15)
 """How far the correction moves white (1 - smallest over largest channel) for the greying to be whole."""
-_NO_CLIPPING: Final = (2.0**100, 2.0**101)
+_NO_CLIPPING: Final = (2.0**60, 2.0**61)
 _NO_CHANGE: Final = 1e-9
 """A matrix this near to the identity moves no 16-bit code."""
 
@@ -38,7 +38,7 @@ class Steps(NamedTuple):
     luminance: tuple[Any, ...]
     """Luminance of linear output light; the weights sum to 1."""
     clip: tuple[Any, Any]
-    """`CLIP_RAMP`; out of reach where the frame is not clipped at white."""
+    """`CLIP_RAMP` as its start and 1 / width, like all ramps; out of reach where the frame is not clipped at white."""
     colour: tuple[Any, Any]
     one_clipped: tuple[Any, Any]
     two_clipped: tuple[Any, Any]
@@ -81,10 +81,10 @@ def prepare(frame: Frame, correction: Correction, output: Output, target: Space)
         matrix=_numbers(matrix),
         source_luminance=_numbers(gain * luminance_of(frame.space)),
         luminance=_numbers(luminance_of(target)),
-        clip=_numbers(_NO_CLIPPING if floating and not clipped_at_white(frame) else CLIP_RAMP),
-        colour=_numbers(COLOUR_RAMP),
-        one_clipped=_numbers(ONE_CLIPPED_RAMP),
-        two_clipped=_numbers(TWO_CLIPPED_RAMP),
+        clip=_ramp(_NO_CLIPPING if floating and not clipped_at_white(frame) else CLIP_RAMP),
+        colour=_ramp(COLOUR_RAMP),
+        one_clipped=_ramp(ONE_CLIPPED_RAMP),
+        two_clipped=_ramp(TWO_CLIPPED_RAMP),
         strength=np.float32(_strength(matrix)),
         bounded=not floating,
         code_white=np.float32(1 if floating else levels - 1),
@@ -99,7 +99,8 @@ def prepare(frame: Frame, correction: Correction, output: Output, target: Space)
 def _strength(matrix: NDArray[np.float64]) -> float:
     white = matrix.sum(axis=1)
     moved = 1 - white.min() / white.max()
-    share = min(max((moved - STRENGTH_RAMP[0]) / (STRENGTH_RAMP[1] - STRENGTH_RAMP[0]), 0.0), 1.0)
+    start, full = STRENGTH_RAMP
+    share = min(max((moved - start) / (full - start), 0.0), 1.0)
     return float(share * share * (3 - 2 * share))
 
 
@@ -118,6 +119,10 @@ def changes_nothing(frame: Frame, correction: Correction, output: Output, target
     matrix = 2.0**output.exposure_ev * out_from_in(frame.space, correction.matrix, target)
     same = fitted.same_curves(frame.space.curves, target.curves) and not toned(frame, output)
     return same and bool(np.abs(matrix - np.eye(3)).max() < _NO_CHANGE)
+
+
+def _ramp(ends: tuple[float, float]) -> tuple[Any, ...]:
+    return _numbers((ends[0], 1 / (ends[1] - ends[0])))
 
 
 def _numbers(values: Any) -> tuple[Any, ...]:

@@ -1,9 +1,9 @@
-"""Transfer curves in the forms that fast loops want: a polynomial, a table over codes, a table over light.
+"""Transfer curves in the forms that fast loops want: a ratio of polynomials, a table over codes, a table over light.
 
-The curves of the standards that start with a straight toe (sRGB, Rec.2020, ROMM) are met by one polynomial of
-degree 8 to a hundredth of a 16-bit step: in the square root of the encoded value when decoding, in the fourth root
-of linear light when encoding.  Every other curve goes through a table.  Everything is computed from
-`grader.colour.transfer`, once in a process.
+The curves of the standards that start with a straight toe (sRGB, Rec.2020, ROMM) are met by one ratio of
+polynomials, of degrees 5 and 4, to less than a hundredth of a 16-bit step: in the encoded value when decoding, in
+the square root of linear light when encoding.  Every other curve goes through a table.  Everything is computed
+from `grader.colour.transfer`, once in a process.
 """
 
 from __future__ import annotations
@@ -18,34 +18,40 @@ from numpy.typing import NDArray
 from grader.colour import tone, transfer
 from grader.model import Curve
 
-LINEAR, POLYNOMIAL, TABLE = 0, 1, 2
+LINEAR, RATIONAL, TABLE = 0, 1, 2
 
-DEGREE: Final = 8
+UPPER, LOWER = 5, 4
+"""Degrees of numerator and denominator."""
 TOLERANCE: Final = 0.02 / 65535
-"""A polynomial may be this far from its curve, in encoded units: a fiftieth of a 16-bit step."""
+"""A ratio may be this far from its curve, in encoded units: a fiftieth of a 16-bit step."""
 
 LOWEST_OCTAVE: Final = -60
 HIGHEST_OCTAVE: Final = 40
 _FINEST_BITS: Final = 12
 _FLOAT_TOLERANCE: Final = 2e-7
-_SAMPLES: Final = 2000
+_SAMPLES, _ROUNDS = 300, 8
+_LARGEST_JUMP: Final = 2e-5
+"""Rounded parameters let curves jump this far at the end of the toe, in linear light."""
 
 Coefficients = tuple[np.float32, ...]
 Floats = NDArray[np.float32]
+Array = NDArray[np.float64]
 Curves = tuple[Curve, Curve, Curve]
 
 
 class Form(NamedTuple):
     """Three curves, ready for the loops; what a form does not need is left at zero.
 
-    ``POLYNOMIAL``: ``slope * x`` below ``toe``, else the polynomial (lowest power first) in a root of x.
+    ``RATIONAL``: ``slope * x`` below ``toe``, else ``upper`` over ``lower`` (lowest power first; ``lower`` begins
+    with 1, which is left out).
     ``TABLE``: ``table`` is (3, K), or (1, K) where the three curves are one.  Over codes (``octave_bits`` 0), K is
     their number.  Over light, each octave from ``lowest`` (``2**first_octave``) to ``highest`` has
     ``2**octave_bits`` equal steps, between which the loop interpolates.
     """
 
     kind: int
-    polynomial: Coefficients
+    upper: Coefficients
+    lower: Coefficients
     toe: np.float32
     slope: np.float32
     table: Floats
@@ -55,7 +61,8 @@ class Form(NamedTuple):
     highest: np.float32
 
 
-_NO_POLYNOMIAL: Final[Coefficients] = (np.float32(0),) * (DEGREE + 1)
+_NO_UPPER: Final[Coefficients] = (np.float32(0),) * (UPPER + 1)
+_NO_LOWER: Final[Coefficients] = (np.float32(0),) * LOWER
 _NO_TABLE: Final = np.zeros((1, 2), np.float32)
 
 
@@ -79,7 +86,7 @@ def decoder(curves: Curves, levels: int) -> Form:
         return _form(LINEAR)
     if levels == 0:
         return _over_light(keys, "decode", False)
-    return _polynomial_decoder(keys) or _over_codes(keys, levels)
+    return _rational_decoder(keys) or _over_codes(keys, levels)
 
 
 def encoder(curves: Curves, *, toned: bool = False, floating: bool = False) -> Form:
@@ -93,7 +100,7 @@ def encoder(curves: Curves, *, toned: bool = False, floating: bool = False) -> F
         return _form(LINEAR)
     if toned or floating:
         return _over_light(keys, "tone" if toned else "encode", not floating)
-    return _polynomial_encoder(keys) or _over_light(keys, "encode", True)
+    return _rational_encoder(keys) or _over_light(keys, "encode", True)
 
 
 class _Key(NamedTuple):
@@ -132,38 +139,42 @@ def _is_straight(curve: Curve) -> bool:
 
 def _form(kind: int, **parts: Any) -> Form:
     nothing = Form(
-        kind, _NO_POLYNOMIAL, np.float32(0), np.float32(0), _NO_TABLE, 0, 0, np.float32(0), np.float32(0)
+        kind,
+        _NO_UPPER,
+        _NO_LOWER,
+        np.float32(0),
+        np.float32(0),
+        _NO_TABLE,
+        0,
+        0,
+        np.float32(0),
+        np.float32(0),
     )
     return nothing._replace(**parts)
 
 
 @lru_cache(maxsize=64)
-def _polynomial_decoder(keys: tuple[_Key, ...]) -> Form | None:
-    """Return a polynomial in sqrt(encoded), its error counted in encoded steps; None where it is too far off."""
+def _rational_decoder(keys: tuple[_Key, ...]) -> Form | None:
+    """Return a ratio in the encoded value, its error counted in encoded steps; None where it is too far off."""
     curve = _toed(keys)
     if curve is None:
         return None
-    encoded = _nodes(curve.d**0.5) ** 2
+    encoded = _nodes(curve.d)
     linear = transfer.decode(curve, encoded)
     steps_per_light = 2e-6 / (transfer.decode(curve, encoded + 1e-6) - transfer.decode(curve, encoded - 1e-6))
-    found = _fit(np.sqrt(encoded), linear, steps_per_light)
-    if found is None:
-        return None
-    return _form(POLYNOMIAL, polynomial=found, toe=np.float32(curve.d), slope=np.float32(curve.c))
+    return _rational(_fit(encoded, linear, steps_per_light), curve.d, curve.c)
 
 
 @lru_cache(maxsize=64)
-def _polynomial_encoder(keys: tuple[_Key, ...]) -> Form | None:
-    """Return a polynomial in linear ** (1/4); None where it is too far off."""
+def _rational_encoder(keys: tuple[_Key, ...]) -> Form | None:
+    """Return a ratio in the square root of linear light; None where it is too far off."""
     curve = _toed(keys)
     if curve is None:
         return None
-    toe = curve.c * curve.d
-    linear = _nodes(toe**0.25) ** 4
-    found = _fit(linear**0.25, transfer.encode(curve, linear), np.ones_like(linear))
-    if found is None:
-        return None
-    return _form(POLYNOMIAL, polynomial=found, toe=np.float32(toe), slope=np.float32(1 / curve.c))
+    toe = (curve.a * curve.d + curve.b) ** curve.g
+    root = np.exp(np.log(toe) / 2 * (1 - _nodes(0.0)))  # equal shares for equal ratios of light
+    encoded = transfer.encode(curve, root**2)
+    return _rational(_fit(root, encoded, np.ones_like(root)), toe, 1 / curve.c)
 
 
 def _toed(keys: tuple[_Key, ...]) -> Curve | None:
@@ -171,22 +182,55 @@ def _toed(keys: tuple[_Key, ...]) -> Curve | None:
     if len(set(keys)) > 1 or keys[0].samples:
         return None
     curve = keys[0].curve()
-    simple = curve.e == curve.f == 0 and 0 < curve.d < 1 and curve.c > 0 and curve.a > 0
-    continuous = simple and abs((curve.a * curve.d + curve.b) ** curve.g - curve.c * curve.d) < 1e-6
-    return curve if continuous else None
+    if curve.e or curve.f or not 0 < curve.d < 1 or curve.c <= 0 or curve.a <= 0 or curve.g < 1:
+        return None
+    jump = max(curve.a * curve.d + curve.b, 0.0) ** curve.g - curve.c * curve.d
+    return curve if abs(jump) < _LARGEST_JUMP else None
 
 
-def _nodes(low: float) -> NDArray[np.float64]:
+def _nodes(low: float) -> Array:
     """Return Chebyshev points from ``low`` to 1."""
     cosines = np.cos((np.arange(_SAMPLES) + 0.5) * np.pi / _SAMPLES)
     return np.asarray((1 + low + (1 - low) * cosines) / 2, np.float64)
 
 
-def _fit(at: NDArray[Any], wanted: NDArray[Any], weight: NDArray[Any]) -> Coefficients | None:
-    powers = np.vander(at, DEGREE + 1, increasing=True)
-    found, *_ = np.linalg.lstsq(powers * weight[:, None], wanted * weight, rcond=None)
-    worst = np.max(np.abs(powers @ found - wanted) * weight)
-    return tuple(np.float32(value) for value in found) if worst < TOLERANCE else None
+def _rational(found: tuple[Array, Array] | None, toe: float, slope: float) -> Form | None:
+    if found is None:
+        return None
+    upper, lower = (tuple(np.float32(value) for value in values) for values in found)
+    return _form(RATIONAL, upper=upper, lower=lower, toe=np.float32(toe), slope=np.float32(slope))
+
+
+def _fit(at: Array, wanted: Array, weight: Array) -> tuple[Array, Array] | None:
+    """Return numerator and denominator (without its leading 1) of the best ratio found, if it is good enough.
+
+    Least squares of ``upper - wanted * lower``, weighted by the denominator of the round before [1]_ and more where
+    the error was large [2]_.
+
+    References
+    ----------
+    .. [1] C. Sanathanan, J. Koerner, "Transfer function synthesis as a ratio of two complex polynomials", IEEE
+       Transactions on Automatic Control 8, 1963, 56-58.
+    .. [2] C. L. Lawson, "Contributions to the theory of linear least maximum approximation", thesis, UCLA, 1961.
+    """
+    powers = np.vander(at, UPPER + 1, increasing=True)
+    columns = np.hstack([powers, -wanted[:, None] * powers[:, 1 : LOWER + 1]])
+    divisor, emphasis = np.ones_like(at), np.ones_like(at)
+    best: tuple[Array, Array] | None = None
+    least = TOLERANCE
+    for _ in range(_ROUNDS):
+        scale = weight * emphasis / divisor
+        found, *_ = np.linalg.lstsq(columns * scale[:, None], wanted * scale, rcond=None)
+        upper, lower = found[: UPPER + 1], found[UPPER + 1 :]
+        divisor = 1 + powers[:, 1 : LOWER + 1] @ lower
+        if divisor.min() <= 0:
+            break
+        error = np.abs(powers @ upper / divisor - wanted) * weight
+        if error.max() < least:
+            least, best = error.max(), (np.asarray(upper, np.float64), np.asarray(lower, np.float64))
+        emphasis = emphasis * (error / error.max() + 1e-3) ** 0.2
+        emphasis /= emphasis.max()
+    return best
 
 
 @lru_cache(maxsize=16)
