@@ -102,7 +102,7 @@ def render_html(records: Iterable[Line], *, thumbnails: Thumbnails | None = None
             has_pictures=thumbnails is not None,
             strips=_strips(shoot, drawn, pictures, places),
             quantiles=_quantiles(shoot),
-            untimed=sum(row.clock_s is None for row in shoot.frames) if data["timed"] else 0,
+            untimed=sum(row.clock_s is None for row in drawn) if data["timed"] else 0,
             facts=_facts(shoot),
             preset=json.dumps(mapping(shoot.run.get("preset")), indent=2, ensure_ascii=False, default=str),
             opponent=data["opponent"],

@@ -172,7 +172,8 @@ def sort_lines(records: Iterable[Line]) -> Lines:
 def frame_rows(lines: Lines) -> tuple[FrameRow, ...]:
     """Return one row a frame, in the log's order."""
     records = list(lines.frames.values())
-    labels = body_labels(records, lines.summary)
+    labels = {"": "", **body_labels(filter(_came_through, records), lines.summary)}
+    labels |= dict.fromkeys({text(record.get("body")) for record in records} - set(labels), "")
     moments = [moment for record in records if (moment := _moment(record.get("taken_at"))) is not None]
     aware = bool(moments) and all(moment.tzinfo is not None for moment in moments)
     offset = moments[0].utcoffset() if aware else None
@@ -180,6 +181,10 @@ def frame_rows(lines: Lines) -> tuple[FrameRow, ...]:
     return tuple(
         _row(record, labels[text(record.get("body"))], aware=aware, offset_s=offset_s) for record in records
     )
+
+
+def _came_through(record: Line) -> bool:
+    return record.get("status") != "failed" or bool(text(record.get("body")))
 
 
 def body_labels(records: Iterable[Line], summary: Line) -> dict[str, str]:

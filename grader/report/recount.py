@@ -227,7 +227,7 @@ def _bodies(rows: Sequence[FrameRow], summary: Line) -> tuple[Body, ...]:
     }
     counts = Counter(row.body for row in rows)
     labels = {body: text(entry.get("label")) for body, entry in known.items() if text(entry.get("label"))}
-    labels |= {row.body: row.label for row in rows}
+    labels |= {row.body: row.label for row in rows if row.label}
     others = {body: text(known.get(body, {}).get("offset_to")) for body in labels}
     against = {body: labels.get(other, other) for body, other in others.items()}  # a name, or a label already
     bodies = [

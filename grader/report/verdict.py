@@ -13,6 +13,7 @@ from grader.report.words import (
     clock,
     count,
     drift_figures,
+    drift_words,
     drifted,
     kelvin,
     signed,
@@ -93,17 +94,17 @@ def _worked(shoot: Shoot) -> Answer:
             f"mean cast, \u0394E 2000: {before:.1f} (1 is just visible){_doubt(shoot)}",
             target,
         )
-    figures = (
-        f"mean cast, \u0394E 2000: {before:.1f} \u2192 {after:.1f} by its own measurement{_doubt(shoot)}"
-    )
+    figures = f"mean cast, \u0394E 2000: {before:.1f} \u2192 {after:.1f}, as single frames measure it{_doubt(shoot)}"
     missing = len(shoot.frames) - done
-    if after > before:
+    if after > before + 1.0:  # visibly more
         return Answer(question, "failed", "No: more cast is left than there was.", figures, target)
     if missing:
         return Answer(
             question, "look", f"Yes, but {count(missing, 'frame')} did not come through.", figures, "look"
         )
-    words = "There was hardly a cast to remove." if before < 1 else "Yes: every frame came through."
+    words = "Yes: every frame came through."
+    if before - after < 1.0:
+        words = "Every frame came through; there was little cast to remove."
     return Answer(question, "fine", words, figures, target)
 
 
@@ -144,11 +145,10 @@ def _drift(shoot: Shoot) -> Answer:
         return Answer(question, "unknown", "Too few frames over too short a time to tell.", "", target)
     moving = [stretch for stretch, moved in told if moved]
     if not moving:
+        held = all(drift_words(stretch) == "steady" for stretch, _ in told)
+        words = "No: it held still within each stretch." if held else "None beyond what chance explains."
         most = max((stretch for stretch, _ in told), key=lambda one: abs(one.drift_mired_per_hour or 0))
-        figures = (
-            f"at most {abs(most.drift_mired_per_hour or 0):.0f} mired/h, not beyond chance or not visible"
-        )
-        return Answer(question, "fine", "No: it held still within each stretch.", figures, target)
+        return Answer(question, "fine", words, f"most in {most.stretch}: {drift_figures(most)}", target)
     worst = max(moving, key=lambda one: abs(one.drift_mired_per_hour or 0) * (span_hours(one) or 0))
     named = ", ".join(stretch.stretch for stretch in moving[:4]) + (" \u2026" if len(moving) > 4 else "")
     words = f"Yes, in {len(moving)} of {count(len(told), 'stretch', 'stretches')}: {named}."

@@ -149,10 +149,12 @@ def why(row: FrameRow) -> list[str]:
 
 def drift_words(stretch: Stretch) -> str:
     """Return in words what the light did during a stretch."""
-    moved = drifted(stretch)
-    if moved is None:
+    moved, hours = drifted(stretch), span_hours(stretch)
+    if moved is None or hours is None:
         return "too short to tell"
-    return "got " + " and ".join(moved) if moved else "steady"
+    if moved:
+        return "got " + " and ".join(moved)
+    return "steady" if _held(stretch, hours) else "nothing beyond chance"
 
 
 def drifted(stretch: Stretch) -> list[str] | None:
@@ -161,18 +163,46 @@ def drifted(stretch: Stretch) -> list[str] | None:
     if hours is None or stretch.drift_mired_per_hour is None or stretch.drift_mired_low is None:
         return None
     moved = []
-    if _moved(
-        stretch.drift_mired_per_hour,
-        stretch.drift_mired_low,
-        stretch.drift_mired_high,
-        JUST_SEEN_MIRED / hours,
-    ):
-        moved.append("warmer" if stretch.drift_mired_per_hour > 0 else "cooler")
-    if _moved(
-        stretch.drift_duv_per_hour, stretch.drift_duv_low, stretch.drift_duv_high, JUST_SEEN_DUV / hours
-    ):
-        moved.append("greener" if (stretch.drift_duv_per_hour or 0) > 0 else "more magenta")
+    for slope, low, high, least, (up, down) in _axes(stretch):
+        if _beyond_chance(low, high) and abs(slope or 0.0) * hours >= least:
+            moved.append(up if (slope or 0.0) > 0 else down)
     return moved
+
+
+def _held(stretch: Stretch, hours: float) -> bool:
+    """Return whether even the ends of the intervals, or a slope beyond chance, are too little to be seen."""
+    for slope, low, high, least, _ in _axes(stretch):
+        ends = (slope,) if _beyond_chance(low, high) else (low, high)
+        if any(abs(end or 0.0) * hours >= least for end in ends):
+            return False
+    return True
+
+
+_Axis = tuple[float | None, float | None, float | None, float, tuple[str, str]]
+
+
+def _axes(stretch: Stretch) -> tuple[_Axis, _Axis]:
+    """Return slope, interval, least visible movement and the words for up and down, along both scales."""
+    s = stretch
+    warm = (
+        s.drift_mired_per_hour,
+        s.drift_mired_low,
+        s.drift_mired_high,
+        JUST_SEEN_MIRED,
+        ("warmer", "cooler"),
+    )
+    green = (
+        s.drift_duv_per_hour,
+        s.drift_duv_low,
+        s.drift_duv_high,
+        JUST_SEEN_DUV,
+        ("greener", "more magenta"),
+    )
+    return warm, green
+
+
+def _beyond_chance(low: float | None, high: float | None) -> bool:
+    return low is not None and high is not None and (low > 0 or high < 0)
 
 
 def span_hours(stretch: Stretch) -> float | None:
@@ -211,12 +241,6 @@ def body_words(body: Body) -> str:
     hues = hue_words(body.yellow_blue, body.green_magenta or 0.0)
     seen = f"shows the same light more {hues} than {body.offset_to}"
     return f"{seen}; matched" if body.applied else f"{seen}, within what chance explains; left as it is"
-
-
-def _moved(slope: float | None, low: float | None, high: float | None, least_per_hour: float) -> bool:
-    if slope is None or low is None or high is None:
-        return False
-    return (low > 0 or high < 0) and abs(slope) >= least_per_hour
 
 
 def _sentence(words: str) -> str:

@@ -118,6 +118,7 @@ def test_anything_may_stand_in_a_log(records):
     assert len(frame_rows(lines)) == len(lines.frames)
 
 
+@settings(deadline=None, max_examples=60)
 @given(
     st.sampled_from(["cast", "correction", "residual", "error", "flags", "taken_at", "body", "stretch"]),
     ANYTHING,

@@ -18,7 +18,8 @@ def stretch(slope, low, high, **more):
     [
         (stretch(12.0, 9.0, 15.0), "got warmer"),
         (stretch(-12.0, -15.0, -9.0), "got cooler"),
-        (stretch(12.0, -1.0, 25.0), "steady"),  # chance explains it
+        (stretch(12.0, -1.0, 25.0), "nothing beyond chance"),
+        (stretch(1.0, -1.0, 3.0), "steady"),  # whatever it is, nobody sees it
         (stretch(2.0, 1.0, 3.0), "steady"),  # beyond chance, but nobody sees 2 mired
         (stretch(12.0, 9.0, 15.0, last_taken_at="2031-05-03T12:10:00"), "steady"),  # 2 mired in ten minutes
         (stretch(None, None, None), "too short to tell"),
@@ -75,7 +76,7 @@ def test_the_answers_hold_the_logs_figures(lines):
 
 
 def test_more_cast_than_before_is_no_success(shoots, lines):
-    worse = lines[-1] | {"mean_cast_before": {"delta_e_2000": 2.0}, "mean_cast_after": {"delta_e_2000": 3.0}}
+    worse = lines[-1] | {"mean_cast_before": {"delta_e_2000": 2.0}, "mean_cast_after": {"delta_e_2000": 3.5}}
     assert answer([*lines[:-1], worse], "work").mark == "failed"
 
 
@@ -103,3 +104,11 @@ def test_files_beyond_the_tolerance(lines):
         "beyond_tolerance": ["cards/A/a.tif", {"file": "cards/B/b.tif", "delta_e_2000": 2.5}, 7, None]
     }
     assert read_shoot([summary]).beyond == (("cards/A/a.tif", None), ("cards/B/b.tif", 2.5))
+
+
+def test_a_file_that_could_not_be_read_is_no_body(lines):
+    broken = {"kind": "frame", "file": "broken.jpg", "body": "", "status": "failed"}
+    shoot = read_shoot([*lines[:-1], broken])
+    assert [body.label for body in shoot.bodies] == ["A", "B"]
+    unnamed = broken | {"status": "graded"}
+    assert [body.label for body in read_shoot([*lines[:-1], unnamed]).bodies] == ["A", "B", "C"]
