@@ -7,7 +7,7 @@ import time
 
 import pytest
 
-from grader import errors, workers
+from grader import errors, outcome, workers
 
 LOCAL = workers.Pool(processes=2)
 
@@ -68,8 +68,8 @@ def test_after_a_stop_no_further_job_begins(pool: workers.Pool) -> None:
 
 def test_our_own_errors_come_back_as_they_are() -> None:
     error = errors.DamagedFile("cut short", path="a.tif")
-    assert workers.as_grader_error(error) is error
-    assert isinstance(workers.as_grader_error(MemoryError()), errors.WorkerFailed)
+    assert outcome.as_grader_error(error) is error
+    assert isinstance(outcome.as_grader_error(MemoryError()), errors.WorkerFailed)
 
 
 def test_a_cluster_that_does_not_answer_is_a_plain_error(monkeypatch: pytest.MonkeyPatch) -> None:
