@@ -79,8 +79,10 @@ def test_alpha_goes_along() -> None:
     assert (small.alpha == 77).all()
 
 
-@pytest.mark.parametrize("name", ["astronaut", "coffee", "chelsea", "rocket"])
-@pytest.mark.parametrize("suffix", [".tif", ".jpg", ".png"])
+@pytest.mark.parametrize(
+    ("name", "suffix"),
+    [("astronaut", ".tif"), ("coffee", ".tif"), ("chelsea", ".jpg"), ("rocket", ".jpg"), ("coffee", ".png")],
+)
 def test_the_proxy_of_a_small_frame_is_that_of_the_whole(name: str, suffix: str, tmp_path: Path) -> None:
     """Photographs packaged by scikit-image, enlarged to a camera's size, with noise."""
     photo = Image.fromarray(getattr(skimage.data, name)())
