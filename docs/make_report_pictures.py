@@ -17,8 +17,8 @@ from playwright.sync_api import sync_playwright
 HERE = Path(__file__).resolve().parent
 CHROMIUM = "/usr/bin/chromium"
 ARGUMENTS = ["--headless", "--no-sandbox", "--disable-gpu", "--no-first-run"]
-SIZES = {"report-desktop": (1280, 2900), "report-phone": (390, 2600)}
-COLOURS = 200
+MOST_BYTES = 400_000
+SIZES = {"report-desktop": (1280, 3400), "report-phone": (390, 2600)}
 
 
 def main() -> None:
@@ -47,11 +47,13 @@ def main() -> None:
 
 
 def save(shot: bytes, path: Path, height: int) -> None:
-    """Write the upper part of a screenshot with few colours, which a page of greys does not miss."""
+    """Write the upper part of a screenshot with 256 colours where it would be too large."""
     with Image.open(io.BytesIO(shot)) as picture:
         part = picture.convert("RGB").crop((0, 0, picture.width, min(height, picture.height)))
     path.parent.mkdir(exist_ok=True)
-    part.quantize(COLOURS, dither=Image.Dither.NONE).save(path, optimize=True)
+    part.save(path, optimize=True)
+    if path.stat().st_size > MOST_BYTES:
+        part.quantize(256, method=Image.Quantize.MAXCOVERAGE, kmeans=2).save(path, optimize=True)
     print(f"{path.name}: {path.stat().st_size // 1000} kB")
 
 

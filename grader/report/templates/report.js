@@ -169,10 +169,14 @@
         fillcolor: stretch.hex, line: { color: ink("quiet"), width: 1 } });
       for (const x of stretch.ends) shapes.push({ type: "line", xref: "x", yref: "paper", x0: x, x1: x, y0: 0, y1: 0.86,
         line: { color: ink("rule"), width: 1, dash: "dot" } });
-      const room = (to - from) / Math.max(high - low, 1) * width / 7.5;
+      const pixels = width / Math.max(high - low, 1);
+      const next = Math.min(high + 60 / pixels, ...data.stretches.filter((one) => one.body === stretch.body && one.ends?.[0] > stretch.ends[1]).map((one) => one.ends[0]));
+      const fits = (label, room) => label.length * 7.5 < room * pixels;
       const long = `${stretch.name} \u00b7 ${stretch.light}`;
-      const label = long.length < room ? long : stretch.name.length < room ? stretch.name : "";
-      if (label) texts.push({ text: plain(label), x: (from + to) / 2, y: lane, yref: "y3", showarrow: false, font: { color: "#111111", size: 12 } });
+      const inside = [long, stretch.name].find((label) => fits(label, to - from));
+      const beside = inside ? undefined : [long, stretch.name].find((label) => fits(label, next - to));
+      if (inside) texts.push(note(plain(inside), (from + to) / 2, lane, { yref: "y3", font: { color: "#111111", size: 12 } }));
+      else if (beside) texts.push(note(plain(beside), to, lane, { yref: "y3", xanchor: "left", xshift: 2 }));
     }
     return { shapes, texts };
   };
