@@ -38,6 +38,7 @@ FLAGS: Final[dict[str, str]] = {
     "nothing-measured": "no light could be measured in this frame; it was not corrected",
     "other-body": "the preset was measured on another camera body",
     "other-kind": "the preset was measured on another kind of file (raw against developed)",
+    "grey": "a picture without colours; there is no cast to measure or to correct",
     "page-chosen": "the file holds several pictures; the full-size one was taken",
 }
 """Flag codes as they stand in the log, with the words that a reader sees."""

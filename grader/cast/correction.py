@@ -82,6 +82,8 @@ def correction_for(
     -197
     """
     recipe = Recipe() if recipe is None else recipe
+    if "grey" in header.flags:
+        return identity_correction(None, recipe.adaptation, reason="a picture without colours")
     left = "coloured-light" in flags and recipe.coloured_light == "leave"
     if light_xy is None or left:
         return identity_correction(
@@ -125,6 +127,8 @@ def fixed_correction(fixed: Fixed, header: Header) -> Correction:
     >>> fixed_correction(lamp, Header(body="Northlight N1 9")).flags
     ('other-body',)
     """
+    if "grey" in header.flags:
+        return identity_correction(None, fixed.adaptation, reason="a picture without colours")
     flags = []
     if fixed.measured_on_body and fixed.measured_on_body != header.body:
         flags.append("other-body")

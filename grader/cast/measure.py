@@ -49,8 +49,10 @@ def measure(frame: Frame, recipe: Recipe | None = None) -> Cast:
 def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
     """Return the light of one frame from its proxy (see `measure`)."""
     recipe = recipe or Recipe()
-    cells = cells_from_proxy(proxy)
     flags = proxy.header.flags
+    if "grey" in flags:
+        return Cast(proxy.header, recipe.opponent, flags=flags)
+    cells = cells_from_proxy(proxy)
     if np.count_nonzero(cells.ok) < _FEWEST_CELLS:
         return Cast(proxy.header, recipe.opponent, flags=(*flags, "nothing-measured"))
     vote = cast_vote(cells, proxy.header.referred)

@@ -38,7 +38,7 @@ def frame_from_decoded(decoded: Decoded, path: Path, sha256: str) -> Frame:
         header,
         width_px=pixels.shape[1],
         height_px=pixels.shape[0],
-        flags=(*header.flags, *decoded.flags),
+        flags=(*header.flags, *decoded.flags, *(("grey",) if decoded.kind == "grey" else ())),
         notes=(*header.notes, *decoded.notes),
     )
     return Frame(pixels, space, header, decoded.metadata, alpha, decoded.encoding)

@@ -225,6 +225,7 @@ def _judged_colour(raw: Any, colour: RawColour) -> tuple[list[str], list[str]]:
     """Return the flags and notes that the balance and the matrix give rise to."""
     flags, notes = [], []
     if colour.colours == 1:
+        flags.append("grey")
         notes.append("the sensor sees no colour; the picture is grey")
     elif colour.working_from_balanced is None:
         flags.append("matrix-missing")
