@@ -143,7 +143,8 @@ def check_target_folder(paths: Iterable[str | os.PathLike[str]], out: str | os.P
         ``out`` is a folder that was given as input, or that holds a file that was.
     """
     real_out = os.path.realpath(out)
-    for given in map(os.fspath, paths):
+    for path in paths:
+        given = os.fspath(path)
         for match in [given] if os.path.lexists(given) else glob.glob(given, recursive=True):  # noqa: PTH207
             real = os.path.realpath(match)
             if real_out == (real if os.path.isdir(real) else os.path.dirname(real)):  # noqa: PTH112, PTH120

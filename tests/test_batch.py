@@ -264,7 +264,9 @@ def test_check_works_on_a_folder_that_was_moved(shoot: Path, tmp_path: Path) -> 
 
 
 def test_a_grey_picture_among_others_stays_as_it_is(shoot: Path, tmp_path: Path) -> None:
-    Image.fromarray(np.arange(120 * 90, dtype=np.uint32).reshape(90, 120).astype(np.uint8)).save(shoot / "grey.png")
+    Image.fromarray(np.arange(120 * 90, dtype=np.uint32).reshape(90, 120).astype(np.uint8)).save(
+        shoot / "grey.png"
+    )
     lines = {Path(line["file"]).name: line for line in run(shoot, tmp_path / "out")}
     assert "grey" in lines["grey.png"]["flags"]
     with Image.open(shoot / "grey.png") as before, Image.open(tmp_path / "out" / "grey.png") as after:
