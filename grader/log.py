@@ -1,164 +1,61 @@
-"""The log: JSON Lines, one object a line, flushed as each frame ends; and back again.
+"""The lines of the log: from values, and back again.
 
-Format ``grader-log/1``, published as ``docs/log.schema.json``.  For one file the later line stands.
+Format ``grader-log/1``, published as ``docs/log.schema.json``; `grader.log_file` has the file.
 """
 
 from __future__ import annotations
 
 import base64
-import json
-import os
+import math
+import re
 import zlib
-from collections.abc import Iterable, Mapping
-from dataclasses import dataclass, field, fields
-from pathlib import Path
-from typing import Any, BinaryIO
+from collections.abc import Iterable, Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import fields
+from typing import Any, NoReturn, get_args
 
 import numpy as np
+from numpy.typing import NDArray
 
-from grader.errors import DamagedFile, GraderError, MissingFile, WriteFailed
-from grader.model import Cast, Correction, Counts, Evidence, Header, Reading, Sensor, Written
+from grader.errors import DamagedFile, GraderError
+from grader.log_file import FINISHED, SCHEMA, Line, Log, LogWriter, encode_line, read_log
+from grader.model import (
+    Cast,
+    Correction,
+    Counts,
+    Evidence,
+    Header,
+    Opponent,
+    Reading,
+    Referred,
+    Sensor,
+    Transform,
+    Written,
+)
 
-SCHEMA = "grader-log/1"
-FINISHED = ("graded", "failed", "skipped")
-Line = dict[str, Any]
+__all__ = [
+    "FINISHED",
+    "SCHEMA",
+    "Line",
+    "Log",
+    "LogWriter",
+    "cast_from_line",
+    "correction_from_line",
+    "correction_object",
+    "encode_line",
+    "failed_line",
+    "graded_line",
+    "measured_line",
+    "planned_line",
+    "read_log",
+    "run_line",
+    "written_from_line",
+]
 
-_MAX_LINE_BYTES = 1 << 20
 _MAX_CANDIDATES = 1 << 16
-
-
-def encode_line(line: Mapping[str, Any]) -> bytes:
-    r"""Return one line of the log, newline included; never NaN or Infinity.
-
-    Examples
-    --------
-    >>> encode_line({"kind": "frame", "file": "é.tif"}).decode()
-    '{"kind":"frame","file":"é.tif"}\n'
-    """
-    compact = {"allow_nan": False, "separators": (",", ":")}
-    try:
-        return (json.dumps(line, ensure_ascii=False, **compact) + "\n").encode()  # type: ignore[arg-type]
-    except UnicodeEncodeError:  # a file name that is no UTF-8: keep its bytes as escapes
-        return (json.dumps(line, ensure_ascii=True, **compact) + "\n").encode()  # type: ignore[arg-type]
-
-
-class LogWriter:
-    """Append lines to a log, each flushed to the system as it is written."""
-
-    def __init__(self, path: str | os.PathLike[str], *, keep_bytes: int | None = None) -> None:
-        """Open ``path``; keep its first ``keep_bytes`` (a log that is continued), else start anew."""
-        self.path = Path(path)
-        try:
-            self.path.parent.mkdir(parents=True, exist_ok=True)
-            self._file: BinaryIO = self.path.open("wb" if keep_bytes is None else "r+b")
-            if keep_bytes is not None:
-                self._file.truncate(keep_bytes)
-                self._file.seek(keep_bytes)
-        except OSError as error:
-            raise self._failed(error) from error
-
-    def write(self, line: Mapping[str, Any]) -> None:
-        """Write one line."""
-        try:
-            self._file.write(encode_line(line))
-            self._file.flush()
-        except OSError as error:
-            raise self._failed(error) from error
-
-    def close(self) -> None:
-        """Flush to the disk and close."""
-        if self._file.closed:
-            return
-        try:
-            self._file.flush()
-            os.fsync(self._file.fileno())
-        except OSError as error:
-            raise self._failed(error) from error
-        finally:
-            self._file.close()
-
-    def _failed(self, error: OSError) -> WriteFailed:
-        return WriteFailed(
-            f"the log cannot be written ({error.strerror or error})",
-            path=self.path,
-            hint="choose another place with --log FILE, or free some space",
-        )
-
-
-@dataclass(slots=True)
-class Log:
-    """A log that was read: the run line, the lines of each file by status, the summary."""
-
-    run: Line = field(default_factory=dict)
-    lines: dict[str, dict[str, Line]] = field(default_factory=dict)
-    summary: Line | None = None
-    good_bytes: int = 0
-    """Length of the part that is whole; what follows is a torn last line."""
-    torn: bool = False
-
-    def latest(self) -> list[Line]:
-        """Return the line that stands for each file, in the order of first mention."""
-        return [next(reversed(by_status.values())) for by_status in self.lines.values()]
-
-    def records(self) -> list[Line]:
-        """Return the run line, the line that stands for each file, and the summary if there is one."""
-        return [self.run, *self.latest(), *([] if self.summary is None else [self.summary])]
-
-    def add(self, line: Line) -> None:
-        """Take one more line: the later line for a file stands."""
-        kind = line.get("kind")
-        if kind == "run":
-            self.run = line
-        elif kind == "summary":
-            self.summary = line
-        elif kind == "frame" and isinstance(line.get("file"), str):
-            by_status = self.lines.setdefault(line["file"], {})
-            by_status.pop(str(line.get("status")), None)
-            by_status[str(line.get("status"))] = line
-
-
-def read_log(path: str | os.PathLike[str]) -> Log:
-    """Read a log; a torn last line is left out and noted, damage before it is an error.
-
-    Raises
-    ------
-    MissingFile
-        The log cannot be opened.
-    DamagedFile
-        A line is not JSON, or the file is no log of a schema that this version reads.
-    """
-    log = Log()
-    try:
-        with Path(path).open("rb") as file:
-            _read_lines(file, log, os.fspath(path))
-    except OSError as error:
-        raise MissingFile(f"the log cannot be opened ({error.strerror or error})", path=path) from error
-    if not log.run:
-        raise DamagedFile("this is no grader log: it has no run line", path=path)
-    return log
-
-
-def _read_lines(file: BinaryIO, log: Log, path: str) -> None:
-    number = 0
-    while raw := file.readline(_MAX_LINE_BYTES):
-        number += 1
-        try:
-            line = json.loads(raw) if raw.endswith(b"\n") else None
-        except ValueError:
-            line = None
-        if not isinstance(line, dict):
-            if not file.read(1):
-                log.torn = True
-                return
-            raise DamagedFile(f"line {number} of the log is not a JSON object", path=path, hint="run anew")
-        if line.get("kind") == "run" and line.get("schema") != SCHEMA:
-            raise DamagedFile(
-                f"the log has schema {line.get('schema')!r}; this version reads {SCHEMA!r}",
-                path=path,
-                hint="measure the frames again with this version",
-            )
-        log.add(line)
-        log.good_bytes += len(raw)
+_MAX_ARRAY = 64
+_FORMATS = ("raw", "tiff", "jpeg", "png", "array")
+_CAST_NUMBERS = ("yellow_blue", "green_magenta", "cct_k", "duv", "mired", "delta_e_2000", "doubt_deg")
 
 
 # ---------------------------------------------------------------- values -> lines
@@ -268,37 +165,6 @@ def correction_object(correction: Correction) -> Line:
     }
 
 
-def correction_from_line(line: Mapping[str, Any]) -> Correction:
-    """Rebuild the correction of a planned or graded line.
-
-    Raises
-    ------
-    DamagedFile
-        The line does not hold what such a line holds.
-    """
-    try:
-        given = line["correction"]
-        keep = given["keep"]
-        return Correction(
-            from_xy=None if given["from_xy"] is None else (given["from_xy"][0], given["from_xy"][1]),
-            toward_xy=(given["toward_xy"][0], given["toward_xy"][1]),
-            matrix=np.array(given["matrix"], dtype=np.float64).reshape(3, 3),
-            transform=given["transform"],
-            degree=given["degree"],
-            keep_yellow_blue=keep["yellow_blue"],
-            keep_green_magenta=keep["green_magenta"],
-            shift_mired=given["shift_mired"],
-            shift_duv=given["shift_duv"],
-            stretch=line.get("stretch"),
-            doubt_deg=given.get("doubt_deg"),
-            reason=given["reason"],
-        )
-    except (KeyError, TypeError, ValueError, IndexError) as error:
-        raise DamagedFile(
-            f"a planned line of the log cannot be used ({error})", path=line.get("file"), hint="run anew"
-        ) from error
-
-
 def _cast_object(cast: Cast) -> Line:
     return {
         "yellow_blue": cast.yellow_blue,
@@ -339,6 +205,8 @@ def _evidence_object(evidence: Evidence) -> Line:
 
 
 # ---------------------------------------------------------------- lines -> values
+#
+# A log may come from anywhere: every value is looked at before it is used.
 
 
 def cast_from_line(line: Mapping[str, Any]) -> Cast:
@@ -349,11 +217,67 @@ def cast_from_line(line: Mapping[str, Any]) -> Cast:
     DamagedFile
         The line does not hold what a measured line holds.
     """
-    try:
+    with _reading(line, "measured"):
         return _cast_from_line(line)
-    except (KeyError, TypeError, ValueError, AttributeError, zlib.error) as error:
+
+
+def correction_from_line(line: Mapping[str, Any]) -> Correction:
+    """Rebuild the correction of a planned or graded line.
+
+    Raises
+    ------
+    DamagedFile
+        The line does not hold what such a line holds.
+    """
+    with _reading(line, "planned"):
+        given = line["correction"]
+        keep = given["keep"]
+        return Correction(
+            from_xy=_xy(given["from_xy"]),
+            toward_xy=_xy(given["toward_xy"]) or _refuse("toward_xy"),
+            matrix=_matrix(given["matrix"]),
+            transform=_one_of(given["transform"], get_args(Transform)),
+            degree=_number(given["degree"]),
+            keep_yellow_blue=_number(keep["yellow_blue"]),
+            keep_green_magenta=_number(keep["green_magenta"]),
+            shift_mired=_number_or_none(given["shift_mired"]),
+            shift_duv=_number_or_none(given["shift_duv"]),
+            stretch=_text_or_none(line.get("stretch")),
+            doubt_deg=_number_or_none(given.get("doubt_deg")),
+            reason=_text(given["reason"]),
+        )
+
+
+def written_from_line(line: Mapping[str, Any]) -> tuple[Written, Counts]:
+    """Rebuild what a graded line tells about its output.
+
+    Raises
+    ------
+    DamagedFile
+        The line does not hold what a graded line holds.
+    """
+    with _reading(line, "graded"):
+        given = line["output"]
+        written = Written(
+            file=_text(given["file"]),
+            sha256=_digest(given["sha256"]),
+            format=_text(given["format"]),
+            space=_text(given["space"]),
+            notes=_texts(line["notes"]),
+        )
+        return written, Counts(_number(given["clipped_fraction"]), _number(given["out_of_gamut_fraction"]))
+
+
+@contextmanager
+def _reading(line: Mapping[str, Any], status: str) -> Iterator[None]:
+    try:
+        yield
+    except (LookupError, TypeError, ValueError, ArithmeticError, AttributeError, zlib.error) as error:
+        file = line.get("file")
         raise DamagedFile(
-            f"a measured line of the log cannot be used ({error})", path=line.get("file"), hint="run anew"
+            f"a {status} line of the log cannot be used ({error})",
+            path=file if isinstance(file, str) else None,
+            hint="run anew",
         ) from error
 
 
@@ -362,30 +286,105 @@ def _cast_from_line(line: Mapping[str, Any]) -> Cast:
     sensor = header["sensor"]
     return Cast(
         header=Header(
-            file=line["file"],
-            body=line["body"],
-            taken_at=line["taken_at"],
-            sha256=line["sha256"],
-            daylight_from_decoded=_array_or_none(header["daylight_from_decoded"]),
-            sensor=None if sensor is None else Sensor(**{k: np.array(v, float) for k, v in sensor.items()}),
-            notes=tuple(line["notes"]),
-            **{name: header[name] for name in _HEADER_FIELDS},
+            file=_text(line["file"]),
+            format=_one_of(header["format"], _FORMATS),
+            width_px=_whole(header["width_px"]),
+            height_px=_whole(header["height_px"]),
+            referred=_one_of(header["referred"], get_args(Referred)),
+            body=_text(line["body"]),
+            taken_at=_text_or_none(line["taken_at"]),
+            exposure_time_s=_number_or_none(header["exposure_time_s"]),
+            f_number=_number_or_none(header["f_number"]),
+            iso=_number_or_none(header["iso"]),
+            flash=_flag_or_none(header["flash"]),
+            orientation=_whole(header["orientation"]),
+            daylight_from_decoded=_matrix_or_none(header["daylight_from_decoded"]),
+            sensor=None
+            if sensor is None
+            else Sensor(
+                _array(sensor["sensor_from_rec2020"]),
+                _array(sensor["daylight_neutral"]),
+                _array(sensor["as_shot_neutral"]),
+            ),
+            sha256=None if line["sha256"] is None else _digest(line["sha256"]),
+            notes=_texts(line["notes"]),
         ),
-        white_xy=None if cast["white_xy"] is None else (cast["white_xy"][0], cast["white_xy"][1]),
-        readings={name: Reading(**reading) for name, reading in line["readings"].items()},
-        flags=tuple(line["flags"]),
+        opponent=_one_of(cast["opponent"], get_args(Opponent)),
+        white_xy=_xy(cast["white_xy"]),
+        readings={
+            _text(name): Reading(_number(reading["yellow_blue"]), _number(reading["green_magenta"]))
+            for name, reading in line["readings"].items()
+        },
+        flags=_texts(line["flags"]),
         evidence=None if line["evidence"] is None else _evidence_from(line["evidence"]),
-        **{k: v for k, v in cast.items() if k != "white_xy"},
+        **{name: _number_or_none(cast[name]) for name in _CAST_NUMBERS},
     )
-
-
-def _array_or_none(value: Any) -> Any:
-    return None if value is None else np.array(value, dtype=np.float64).reshape(3, 3)
 
 
 def _evidence_from(value: Mapping[str, Any]) -> Evidence:
-    packed = base64.b64decode(value["zlib"], validate=True)
+    packed = base64.b64decode(_text(value["zlib"]), validate=True)
     raw = zlib.decompressobj().decompress(packed, _MAX_CANDIDATES)
     return Evidence(
-        grid=value["grid"], log_likelihood=np.frombuffer(raw, np.uint8), cells=int(value["cells"])
+        grid=_text(value["grid"]), log_likelihood=np.frombuffer(raw, np.uint8), cells=_whole(value["cells"])
     )
+
+
+def _refuse(value: object) -> NoReturn:
+    raise ValueError(f"not as expected: {str(value)[:40]!r}")
+
+
+def _number(value: Any) -> Any:
+    ok = isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)
+    return value if ok else _refuse(value)
+
+
+def _number_or_none(value: Any) -> Any:
+    return None if value is None else _number(value)
+
+
+def _whole(value: Any) -> int:
+    return value if isinstance(value, int) and not isinstance(value, bool) else _refuse(value)
+
+
+def _flag_or_none(value: Any) -> bool | None:
+    return value if value is None or isinstance(value, bool) else _refuse(value)
+
+
+def _text(value: Any) -> str:
+    return value if isinstance(value, str) else _refuse(value)
+
+
+def _text_or_none(value: Any) -> str | None:
+    return None if value is None else _text(value)
+
+
+def _texts(value: Any) -> tuple[str, ...]:
+    return tuple(_text(one) for one in value) if isinstance(value, list) else _refuse(value)
+
+
+def _one_of(value: Any, known: tuple[str, ...]) -> Any:
+    return value if isinstance(value, str) and value in known else _refuse(value)
+
+
+def _digest(value: Any) -> str:
+    return value if isinstance(value, str) and re.fullmatch("[0-9a-f]{64}", value) else _refuse(value)
+
+
+def _xy(value: Any) -> tuple[float, float] | None:
+    if value is None:
+        return None
+    x, y = value
+    return _number(x), _number(y)
+
+
+def _array(value: Any) -> NDArray[np.float64]:
+    array = np.array(value, dtype=np.float64)
+    return array if array.size <= _MAX_ARRAY and np.isfinite(array).all() else _refuse("array")
+
+
+def _matrix(value: Any) -> NDArray[np.float64]:
+    return _array(value).reshape(3, 3)
+
+
+def _matrix_or_none(value: Any) -> NDArray[np.float64] | None:
+    return None if value is None else _matrix(value)

@@ -42,7 +42,7 @@ LATE = {("model", "colour"), ("batch", ""), ("cluster", ""), ("cli", ""), ("file
 
 def part_of(path: Path) -> str:
     name = path.relative_to(ROOT).parts[0].removesuffix(".py")
-    for stem in ("pixels", "preset"):  # a module and its private neighbours are one part
+    for stem in ("pixels", "preset", "log"):  # a module and its private neighbours are one part
         if name.lstrip("_").startswith(stem):
             return stem
     return {"_kernel": "pixels"}.get(name, name)
