@@ -128,6 +128,7 @@ output = _options(
     click.option(
         "--contact-sheet", type=_FILE, metavar="FILE.jpg", help="Write before/after pictures on sheets."
     ),
+    click.option("--csv", "csv_file", type=_FILE, metavar="FILE", help="Write one row a frame."),
 )
 
 running = _options(
