@@ -1,7 +1,7 @@
 """The compiled loops that grade pixels, in chunks that stay in the processor's nearest cache.
 
-A chunk is some planes of float32 in one flat scratch array: the light (planes 0 to 2), and what the steps hand on to
-each other (3 to 9).  The loops are free of branches, so that the compiler makes vector code of them; a whole
+A chunk is some planes of float32 in one flat scratch array: the file's light (planes 0 to 2), the light that it
+becomes (3 to 5), and what the steps hand on to each other (6 to 9).  The loops are free of branches, so that the compiler makes vector code of them; a whole
 step is left out where no pixel of the chunk needs it, which changes no result.  What the steps mean stands in
 `grader._pixels_plain`, which does the same without a compiler.
 
@@ -47,20 +47,18 @@ def grade(source: Any, target: Any, decode: Form, steps: Steps, encode: Form) ->
     for start in range(0, source.size, 3 * CHUNK):
         count = min(3 * CHUNK, source.size - start) // 3
         _load(source[start : start + 3 * count], planes, count, decode, steps)
-        touched = _excess(planes, count, steps.clip[0]) > _ZERO
-        if touched:
-            _remember(planes)
-        beyond = _multiply(planes, count, steps.matrix)
-        if touched:
+        touched, beyond = _multiply(planes, count, steps.matrix, steps.clip[0])
+        if touched > _ZERO:
             _clipping(planes, count, steps)
             _lift(planes, count, steps)
-            beyond = _make_grey(planes, count, steps)
+            _make_grey(planes, count, steps)
+            beyond = _beyond(planes, count)
         if steps.bounded and beyond > _ZERO:
             _pull_from_black(planes, count, steps.luminance)
             _pull_from_white(planes, count, steps.luminance)
             outside += int(_sum(planes[6 * _PLANE : 6 * _PLANE + count]))
             clipped += int(_sum(planes[7 * _PLANE : 7 * _PLANE + count]))
-        _store(planes, count, encode, steps, target[start : start + 3 * count])
+        _store(planes[3 * _PLANE :], count, encode, steps, target[start : start + 3 * count])
     return outside, clipped
 
 
@@ -167,37 +165,24 @@ def _through_table(plane: Any, table: Any, form: Form) -> None:
 
 
 @_summing
-def _excess(planes: Any, count: int, limit: Any) -> Any:
-    """Return the sum of what is above a limit, 0 if nothing is: a sum becomes vector code, a maximum does not."""
-    total = _ZERO
-    for i in range(count):
-        total += max(planes[i] - limit, _ZERO)
-        total += max(planes[_PLANE + i] - limit, _ZERO)
-        total += max(planes[2 * _PLANE + i] - limit, _ZERO)
-    return total
+def _multiply(planes: Any, count: int, matrix: Any, limit: Any) -> tuple[Any, Any]:
+    """Apply the matrix; return the sums of what the file has above a limit, and of what came out below 0 or above 1.
 
-
-@_fast
-def _remember(planes: Any) -> None:
-    for i in range(3 * _PLANE):
-        planes[3 * _PLANE + i] = planes[i]
-
-
-@_summing
-def _multiply(planes: Any, count: int, matrix: Any) -> Any:
-    """Apply the matrix; return the sum of what came out below black and above white."""
+    The sums are 0 if there is no such thing; a sum becomes vector code, a maximum does not.
+    """
     m00, m01, m02, m10, m11, m12, m20, m21, m22 = matrix
-    beyond = _ZERO
+    touched = beyond = _ZERO
     for i in range(count):
         x, y, z = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         red = m00 * x + m01 * y + m02 * z
         green = m10 * x + m11 * y + m12 * z
         blue = m20 * x + m21 * y + m22 * z
-        planes[i] = red
-        planes[_PLANE + i] = green
-        planes[2 * _PLANE + i] = blue
+        planes[3 * _PLANE + i] = red
+        planes[4 * _PLANE + i] = green
+        planes[5 * _PLANE + i] = blue
+        touched += max(max(x, y, z) - limit, _ZERO)
         beyond += max(-min(red, green, blue), _ZERO) + max(max(red, green, blue) - _ONE, _ZERO)
-    return beyond
+    return touched, beyond
 
 
 @_fast
@@ -208,15 +193,15 @@ def _ramp(value: Any, ramp: Any) -> Any:
 
 @_fast
 def _clipping(planes: Any, count: int, steps: Steps) -> None:
-    """Turn planes 3 to 5, the file's light, into how clipped each channel is; its luminance to 6, shares to 7 to 9."""
+    """Turn planes 0 to 2, the file's light, into how clipped each channel is; its luminance to 6, shares to 7 to 9."""
     s0, s1, s2 = steps.source_luminance
     clip = steps.clip
     for i in range(count):
-        x, y, z = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        x, y, z = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         per_largest = _ONE / (max(x, y, z) + _TINY)
-        planes[3 * _PLANE + i] = _ramp(x, clip)
-        planes[4 * _PLANE + i] = _ramp(y, clip)
-        planes[5 * _PLANE + i] = _ramp(z, clip)
+        planes[i] = _ramp(x, clip)
+        planes[_PLANE + i] = _ramp(y, clip)
+        planes[2 * _PLANE + i] = _ramp(z, clip)
         planes[6 * _PLANE + i] = s0 * x + s1 * y + s2 * z
         planes[7 * _PLANE + i] = x * per_largest
         planes[8 * _PLANE + i] = y * per_largest
@@ -228,8 +213,8 @@ def _lift(planes: Any, count: int, steps: Steps) -> None:
     """Lift clipped channels; leave how likely a pixel may have been white in plane 7."""
     colour = steps.colour
     for i in range(count):
-        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
-        of_red, of_green, of_blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        red, green, blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        of_red, of_green, of_blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         high = max(red, green, blue)
         red_or_more, green_or_more = red + of_red * (high - red), green + of_green * (high - green)
         blue_or_more = blue + of_blue * (high - blue)
@@ -237,21 +222,20 @@ def _lift(planes: Any, count: int, steps: Steps) -> None:
         maybe = _ramp(min(level, green_or_more) / (high + _TINY), colour)
         level = max(level, of_red * red, of_blue * blue)
         green += maybe * of_green * max(level * planes[8 * _PLANE + i] - green, _ZERO)
-        planes[i] = red + maybe * of_red * max(green * planes[7 * _PLANE + i] - red, _ZERO)
-        planes[_PLANE + i] = green
-        planes[2 * _PLANE + i] = blue + maybe * of_blue * max(green * planes[9 * _PLANE + i] - blue, _ZERO)
+        planes[3 * _PLANE + i] = red + maybe * of_red * max(green * planes[7 * _PLANE + i] - red, _ZERO)
+        planes[4 * _PLANE + i] = green
+        planes[5 * _PLANE + i] = blue + maybe * of_blue * max(green * planes[9 * _PLANE + i] - blue, _ZERO)
         planes[7 * _PLANE + i] = maybe
 
 
-@_summing
-def _make_grey(planes: Any, count: int, steps: Steps) -> Any:
-    """Restore luminance and make nearly grey pixels grey; return what is beyond black and white as `_multiply`."""
+@_fast
+def _make_grey(planes: Any, count: int, steps: Steps) -> None:
+    """Restore luminance and make nearly grey pixels grey."""
     l0, l1, l2 = steps.luminance
     one_clipped, two_clipped, strength = steps.one_clipped, steps.two_clipped, steps.strength
-    beyond = _ZERO
     for i in range(count):
-        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
-        of_red, of_green, of_blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        red, green, blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        of_red, of_green, of_blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         wanted, maybe = planes[6 * _PLANE + i], planes[7 * _PLANE + i]
         most = max(of_red, of_green, of_blue)
         second = max(min(of_red, of_green), min(max(of_red, of_green), of_blue))
@@ -264,11 +248,19 @@ def _make_grey(planes: Any, count: int, steps: Steps) -> Any:
             green + grey * (wanted - green),
             blue + grey * (wanted - blue),
         )
-        planes[i] = red
-        planes[_PLANE + i] = green
-        planes[2 * _PLANE + i] = blue
-        beyond += max(-min(red, green, blue), _ZERO) + max(max(red, green, blue) - _ONE, _ZERO)
-    return beyond
+        planes[3 * _PLANE + i] = red
+        planes[4 * _PLANE + i] = green
+        planes[5 * _PLANE + i] = blue
+
+
+@_summing
+def _beyond(planes: Any, count: int) -> Any:
+    """Return the sum of what is below black and above white, 0 if nothing is."""
+    total = _ZERO
+    for i in range(count):
+        red, green, blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
+        total += max(-min(red, green, blue), _ZERO) + max(max(red, green, blue) - _ONE, _ZERO)
+    return total
 
 
 @_fast
@@ -279,7 +271,7 @@ def _pull_from_black(planes: Any, count: int, luminance: Any) -> None:
     """
     l0, l1, l2 = luminance
     for i in range(count):
-        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
+        red, green, blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
         low, high = min(red, green, blue), max(red, green, blue)
         bright = l0 * red + l1 * green + l2 * blue
         clipped = _ONE if abs(bright - _HALF) > _HALF + _EDGE else _ZERO
@@ -293,9 +285,9 @@ def _pull_from_black(planes: Any, count: int, luminance: Any) -> None:
             green + pull * (held - green),
             blue + pull * (held - blue),
         )
-        planes[i] = red if red > floor else _ZERO
-        planes[_PLANE + i] = green if green > floor else _ZERO
-        planes[2 * _PLANE + i] = blue if blue > floor else _ZERO
+        planes[3 * _PLANE + i] = red if red > floor else _ZERO
+        planes[4 * _PLANE + i] = green if green > floor else _ZERO
+        planes[5 * _PLANE + i] = blue if blue > floor else _ZERO
 
 
 @_fast
@@ -303,16 +295,16 @@ def _pull_from_white(planes: Any, count: int, luminance: Any) -> None:
     """Take from colours above white the luminance that cutting them off would cost, then pull them to grey."""
     l0, l1, l2 = luminance
     for i in range(count):
-        red, green, blue = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
+        red, green, blue = planes[3 * _PLANE + i], planes[4 * _PLANE + i], planes[5 * _PLANE + i]
         held = l0 * red + l1 * green + l2 * blue
         excess = l0 * max(red - _ONE, _ZERO) + l1 * max(green - _ONE, _ZERO) + l2 * max(blue - _ONE, _ZERO)
         kept = _ONE - excess / max(held, _TINY)
         red, green, blue, held = kept * red, kept * green, kept * blue, kept * held
         above = max(max(red, green, blue) - held, _ZERO)
         pull = _ONE - min(max(_ONE - held, _ZERO) / (above + _TINY), _ONE)
-        planes[i] = red + pull * (held - red)
-        planes[_PLANE + i] = green + pull * (held - green)
-        planes[2 * _PLANE + i] = blue + pull * (held - blue)
+        planes[3 * _PLANE + i] = red + pull * (held - red)
+        planes[4 * _PLANE + i] = green + pull * (held - green)
+        planes[5 * _PLANE + i] = blue + pull * (held - blue)
 
 
 @_summing
@@ -324,18 +316,18 @@ def _sum(flags: Any) -> Any:
 
 
 @_exact
-def _store(planes: Any, count: int, form: Form, steps: Steps, target: Any) -> None:
+def _store(light: Any, count: int, form: Form, steps: Steps, target: Any) -> None:
     if form.kind == RATIONAL:
         for channel in range(3):
-            _encode(planes[channel * _PLANE : channel * _PLANE + count], form)
+            _encode(light[channel * _PLANE : channel * _PLANE + count], form)
     elif form.kind == TABLE:
-        _through_tables(planes, count, form)
-    _store_codes(planes, count, target, steps.code_white, _HALF if steps.bounded else _ZERO)
+        _through_tables(light, count, form)
+    _store_codes(light, count, target, steps.code_white, _HALF if steps.bounded else _ZERO)
 
 
 @_fast
-def _store_codes(planes: Any, count: int, target: Any, scale: Any, rounding: Any) -> None:
+def _store_codes(light: Any, count: int, target: Any, scale: Any, rounding: Any) -> None:
     for i in range(count):
-        target[3 * i] = planes[i] * scale + rounding
-        target[3 * i + 1] = planes[_PLANE + i] * scale + rounding
-        target[3 * i + 2] = planes[2 * _PLANE + i] * scale + rounding
+        target[3 * i] = light[i] * scale + rounding
+        target[3 * i + 1] = light[_PLANE + i] * scale + rounding
+        target[3 * i + 2] = light[2 * _PLANE + i] * scale + rounding
