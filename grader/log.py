@@ -76,10 +76,17 @@ def run_line(
     }
 
 
-def failed_line(file: str, error: GraderError, *, base: Mapping[str, Any] | None = None) -> Line:
-    """Return the line of a frame that failed: what happened and what to do."""
-    line = dict(base or {"kind": "frame", "file": file})
-    line["status"] = "failed"
+def failed_line(
+    file: str,
+    error: GraderError,
+    *,
+    base: Mapping[str, Any] | None = None,
+    status: str = "failed",
+    **facts: Any,
+) -> Line:
+    """Return the line of a frame that failed (or was skipped): what happened and what to do."""
+    line = dict(base or {"kind": "frame", "file": file}) | facts
+    line["status"] = status
     line["error"] = {"code": error.code, "message": error.message, "hint": error.hint}
     return line
 

@@ -177,6 +177,19 @@ def name_targets(sources: Sequence[Source], suffixes: Sequence[str]) -> list[Pur
     return _numbered(named)
 
 
+def targets_for(sources: Sequence[Source], output_format: str) -> dict[str, PurePath]:
+    """Return where the output of each source (by its path) goes below the output folder (see `name_targets`)."""
+    suffixes = [_suffix(source, output_format) for source in sources]
+    return {s.path: t for s, t in zip(sources, name_targets(sources, suffixes), strict=True)}
+
+
+def _suffix(source: Source, output_format: str) -> str:
+    own = source.relative.suffix
+    if output_format == "same":
+        return ".tif" if own.lower() in RAW_SUFFIXES else own
+    return {"tiff": ".tif", "jpeg": ".jpg", "png": ".png", "dng": own}[output_format]
+
+
 def _numbered(named: Sequence[PurePath]) -> list[PurePath]:
     taken = {_fold(target): 0 for target in named}
     result = list(named)

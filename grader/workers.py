@@ -8,13 +8,13 @@ lost becomes an outcome with an error, never an exception of the batch.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator
-from contextlib import contextmanager
+from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass
 from typing import Any
 
 from grader.outcome import Job, Outcome, Result, Stop, guarded, outcome_of
 
-__all__ = ["Outcome", "Pool", "Runner", "Stop", "crew", "run"]
+__all__ = ["Outcome", "Pool", "Runner", "Staff", "Stop", "crew", "run"]
 
 Runner = Callable[[Callable[[Any], Any], Iterable[Any], Stop], Iterator[Outcome[Any, Any]]]
 """Runs a function on every job: ``runner(function, jobs, stop)``, see `run`."""
@@ -88,6 +88,46 @@ def crew(pool: Pool) -> Iterator[Runner]:
             yield processes.run
         finally:
             processes.close()
+
+
+class Staff:
+    """The workers of one run: hired when they are first needed, kept for all its passes.
+
+    Parameters
+    ----------
+    pool : Pool
+        Where most jobs are done, side by side.
+    alone : callable
+        Returns the pool for a job that is done apart, by itself.
+    stop : Stop
+    """
+
+    def __init__(self, pool: Pool, alone: Callable[[], Pool], stop: Stop) -> None:
+        self._pool, self._alone, self._stop = pool, alone, stop
+        self._runner: Runner | None = None
+        self._hired = ExitStack()
+
+    def run(
+        self, function: Callable[[Any], Any], jobs: Iterable[Any], apart: Callable[[Any], bool]
+    ) -> Iterator[Outcome[Any, Any]]:
+        """Yield outcomes as `run` does; jobs for which ``apart`` is true come last, one after the other."""
+        together: list[Any] = []
+        by_themselves: list[Any] = []
+        for job in jobs:
+            (by_themselves if apart(job) else together).append(job)
+        if together:
+            if self._runner is None:
+                self._runner = self._hired.enter_context(crew(self._pool))
+            yield from self._runner(function, together, self._stop)
+        for job in by_themselves:
+            if self._stop.asked:
+                return
+            yield from run(function, [job], self._alone(), self._stop)
+
+    def close(self) -> None:
+        """Let all workers go."""
+        self._runner = None
+        self._hired.close()
 
 
 def _run_here(function: Callable[[Any], Any], jobs: Iterable[Any], stop: Stop) -> Iterator[Outcome[Any, Any]]:

@@ -27,16 +27,23 @@ ALLOWED = {
     "workers": LEAVES | {"cluster", "outcome", "processes"},
     "sources": LEAVES,
     "run": LEAVES | {"log"},
-    "jobs": LEAVES | {"cast", "colour", "files", "pixels"},
+    "target": LEAVES,
+    "resume": LEAVES | {"log"},
+    "halt": LEAVES | {"target"},
+    "records": LEAVES | {"cast", "colour", "files", "log", "resume"},
+    "room": LEAVES | {"files", "workers"},
+    "jobs": LEAVES | {"cast", "colour", "files", "pixels", "target"},
     "shootfile": LEAVES | {"cast", "colour", "files", "preset"},
     "reporting": LEAVES | {"files", "log", "pixels", "report"},
     "checking": LEAVES | {"cast", "files", "log", "workers"},
     "exporting": LEAVES | {"cast", "clf", "log", "preset"},
-    "batch": LEAVES
-    | {"cast", "colour", "files", "jobs", "log", "preset", "run", "shootfile", "sources", "workers"},
+    "passes": LEAVES
+    | {"cast", "colour", "halt", "jobs", "log", "preset", "records", "resume", "room", "run", "shootfile"}
+    | {"sources", "target", "workers"},
+    "batch": LEAVES | {"log", "passes", "preset", "workers"},
 }
 ALLOWED["cli"] = set(ALLOWED)
-LATE = {("model", "colour"), ("batch", ""), ("cluster", ""), ("cli", ""), ("files", "")}
+LATE = {("model", "colour"), ("passes", ""), ("cluster", ""), ("cli", ""), ("files", "")}
 """Imports inside functions that the rule would forbid: Frame.from_array, and the version number."""
 
 
