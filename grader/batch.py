@@ -12,7 +12,6 @@ from typing import Any
 
 from grader.log import Line
 from grader.model import Fixed, Recipe
-from grader.passes import LOG_NAME  # noqa: F401 - its home for callers
 from grader.passes import Batch, Options, Paths, Progress
 from grader.preset import Preset
 from grader.workers import Stop

@@ -13,10 +13,11 @@ from batchkit import NEUTRAL, WARM, encoded_scene, write_jpeg, write_tiff
 from PIL import Image
 
 import grader
-from grader.batch import LOG_NAME, Batch, Options
+from grader.batch import Batch, Options
 from grader.errors import PresetError
 from grader.log import read_log
 from grader.model import Fixed, Output, Recipe
+from grader.passes import LOG_NAME
 from grader.workers import Pool, Stop
 
 SCHEMA = json.loads((Path(__file__).parents[1] / "docs" / "log.schema.json").read_text(encoding="utf-8"))

@@ -224,12 +224,11 @@ def _pool(given: dict[str, Any]) -> Any:
     workers = given.get("workers")
     if workers is None:
         workers = os.cpu_count() or 1
-    memory = _bytes(given["memory"]) if given.get("memory") else None
     return Pool(
         processes=workers,
         cluster=given.get("cluster"),
         timeout_s=given.get("frame_timeout"),
-        memory_bytes=None if memory is None else memory // max(workers, 1),
+        memory_bytes=_bytes(given["memory"]) if given.get("memory") else None,
     )
 
 
