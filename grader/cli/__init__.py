@@ -81,12 +81,15 @@ def run(arguments: list[str] | None = None) -> int:
 
     try:
         result: Any = grader.main(args=arguments, prog_name="grader", standalone_mode=False)
-    except click.exceptions.Abort:
+    except (click.exceptions.Abort, KeyboardInterrupt):
+        click.echo("interrupted", err=True)
         return 130
     except click.ClickException as error:
         error.show()
         return error.exit_code
     except GraderError as error:
-        click.echo(f"grader: {error}", err=True)
+        from grader.cli.console import plain  # noqa: PLC0415 - after --help
+
+        click.echo(f"grader: {plain(str(error))}", err=True)
         return 2 if isinstance(error, PresetError) else 6 if isinstance(error, WriteFailed) else 5
     return result if isinstance(result, int) else 0

@@ -76,6 +76,7 @@ def check(
 ) -> int:
     """Re-read the finished run in FOLDER and tell what differs from its log."""
     from grader.checking import check as check_run  # noqa: PLC0415 - after --help
+    from grader.cli.console import plain  # noqa: PLC0415
     from grader.workers import Pool  # noqa: PLC0415
 
     pool = Pool(processes=os.cpu_count() or 1 if workers is None else workers)
@@ -86,7 +87,7 @@ def check(
         if as_json:
             click.echo(json.dumps(asdict(finding)))
         elif finding.problem is not None:
-            click.echo(f"{finding.output or finding.file}: {finding.problem}")
+            click.echo(plain(f"{finding.output or finding.file}: {finding.problem}"))
     if not quiet:
         click.echo(f"{seen - wrong} of {seen} outputs are as logged", err=True)
     return 3 if wrong else 0

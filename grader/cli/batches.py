@@ -129,13 +129,16 @@ def _batch(paths: tuple[str, ...], out: str | None, preset: Preset, given: dict[
 
 def _run(batch: Batch, given: dict[str, Any], passes: Any) -> int:
     """Run the passes, telling failures as they come and the result at the end; return the exit code."""
-    from grader.cli.console import stopping_on_interrupt, tell_end, tell_failure  # noqa: PLC0415
+    from grader.cli.console import plain, stopping_on_interrupt, tell_end, tell_failure  # noqa: PLC0415
     from grader.log import encode_line  # noqa: PLC0415
 
-    with stopping_on_interrupt(batch.stop), batch:
+    inline = batch.options.pool.processes < 1 and batch.options.pool.cluster is None
+    with stopping_on_interrupt(batch.stop, in_this_process=inline), batch:
+        for note in [] if given["quiet"] else batch.notes:
+            click.echo(f"note: {plain(note)}", err=True)
         lines: Iterator[Line] = passes()
         for line in lines:
-            if line["status"] == "failed":
+            if line["status"] in ("failed", "skipped"):
                 tell_failure(line)
             if given["as_json"]:
                 click.echo(encode_line(line), nl=False)

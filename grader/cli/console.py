@@ -46,18 +46,38 @@ class ProgressBar:
             self._bar.close()
 
 
+def plain(text: str) -> str:
+    r"""Return text as a terminal can show it: control and direction-changing characters spelt out.
+
+    File names and metadata may hold any of them.
+
+    Examples
+    --------
+    >>> plain("a\x1b[2J.tif")
+    'a\\x1b[2J.tif'
+    """
+    if text.isprintable():
+        return text
+    return "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in text)
+
+
 @contextmanager
-def stopping_on_interrupt(stop: Stop) -> Iterator[None]:
-    """Let Ctrl-C ask the batch to stop: once after the frames in flight, twice at once."""
+def stopping_on_interrupt(stop: Stop, *, in_this_process: bool = False) -> Iterator[None]:
+    """Let Ctrl-C ask the batch to stop: once after the frames in flight, twice at once.
+
+    A frame that is computed ``in_this_process`` is given up by KeyboardInterrupt; its output stays whole or absent.
+    """
 
     def ask(_signal: int, _frame: object) -> None:
         stop.ask()
         words = (
-            "stopping at once"
+            "stopping at once; the same command with --resume goes on from here"
             if stop.at_once
             else "finishing the frames in flight; Ctrl-C again stops at once"
         )
         click.echo(f"\n{words}", err=True)
+        if stop.at_once and in_this_process:
+            raise KeyboardInterrupt
 
     before = {number: signal.signal(number, ask) for number in (signal.SIGINT, signal.SIGTERM)}
     try:
@@ -71,7 +91,7 @@ def tell_failure(line: Mapping[str, Any]) -> None:
     """Say that a frame failed, why, and what to do."""
     error = line["error"]
     hint = f"; {error['hint']}" if error.get("hint") else ""
-    click.echo(f"{click.format_filename(line['file'])}: {error['message']}{hint}", err=True)
+    click.echo(plain(f"{line['file']}: {error['message']}{hint}"), err=True)
 
 
 def tell_end(batch: Batch) -> None:
@@ -124,6 +144,6 @@ def _by_eye(batch: Batch) -> Iterator[str]:
     lines.sort(key=lambda line: -((line.get("cast") or {}).get("doubt_deg") or 99.0))
     for line in lines[:_LISTED]:
         why = "; ".join(FLAGS.get(flag, flag) for flag in line["flags"] if flag in EYE_FLAGS)
-        yield f"  {click.format_filename(line['file'])}: {why}"
+        yield f"  {plain(line['file'])}: {why}"
     if len(lines) > _LISTED:
         yield f"  ... and {len(lines) - _LISTED} more; the log and the report list them all"
