@@ -78,34 +78,55 @@ def find_sources(
     missing: list[MissingFile] = []
     found: dict[str, str] = {}
     outside = [os.path.realpath(folder) for folder in leave_out]
-    for given in paths:
-        files = _expand(os.fspath(given), recurse=recurse)
-        if not files:
-            missing.append(_missing(os.fspath(given), recurse=recurse))
+    for path_like in paths:
+        given, told = os.fspath(path_like), len(missing)
+        files = _expand(given, recurse=recurse, unreadable=missing)
+        if not files and len(missing) == told:
+            missing.append(_missing(given, recurse=recurse))
         for path in files:
             real = os.path.realpath(path)
             if not any(_is_inside(real, folder) for folder in outside):
                 found.setdefault(real, path)
+            elif path == given:
+                missing.append(
+                    MissingFile(
+                        "it lies in the output folder", path=given, hint="name another --out, or leave it out"
+                    )
+                )
     unique = list(found.values())
     base = _common_folder(unique)
     sources = [Source(path, PurePath(os.path.relpath(os.path.abspath(path), base))) for path in unique]  # noqa: PTH100
     return sorted(sources, key=lambda s: (s.relative.as_posix(), s.path)), missing
 
 
-def _expand(given: str, *, recurse: bool) -> list[str]:
+def _expand(given: str, *, recurse: bool, unreadable: list[MissingFile]) -> list[str]:
     if os.path.isdir(given):  # noqa: PTH112 - names may hold bytes that are no UTF-8
-        return _pictures_in(given, recurse=recurse)
+        return _pictures_in(given, recurse=recurse, unreadable=unreadable)
     if os.path.lexists(given):
         return [given]
     files: list[str] = []
     for match in sorted(glob.glob(given, recursive=recurse)):  # noqa: PTH207
-        files += _pictures_in(match, recurse=recurse) if os.path.isdir(match) else [match]  # noqa: PTH112
+        if os.path.isdir(match):  # noqa: PTH112
+            files += _pictures_in(match, recurse=recurse, unreadable=unreadable)
+        else:
+            files.append(match)
     return files
 
 
-def _pictures_in(folder: str, *, recurse: bool) -> list[str]:
+def _pictures_in(folder: str, *, recurse: bool, unreadable: list[MissingFile]) -> list[str]:
+    """Return the pictures in a folder; folders that cannot be listed are told, never passed over in silence."""
+
+    def tell(error: OSError) -> None:
+        unreadable.append(
+            MissingFile(
+                f"the folder cannot be listed ({error.strerror or error})",
+                path=error.filename,
+                hint="check its permissions and the disk",
+            )
+        )
+
     files: list[str] = []
-    for where, folders, names in os.walk(folder):
+    for where, folders, names in os.walk(folder, onerror=tell):
         folders[:] = sorted(f for f in folders if not f.startswith(".")) if recurse else []
         files += [
             os.path.join(where, name)  # noqa: PTH118
