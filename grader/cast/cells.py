@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.cast.plane import AB_FROM_LOG_LMS, LMS_FROM_REC2020
+from grader.cast.proxy_loops import sum_boxes
 from grader.colour.spaces import XYZ_FROM_REC2020
 from grader.model import Proxy
 
@@ -64,12 +65,7 @@ def cells_from_proxy(proxy: Proxy, target: int = CELLS) -> Cells:
 def _box_average(proxy: Proxy, target: int) -> tuple[Array, Array]:
     h, w = proxy.usable.shape
     side = max(round((h * w / target) ** 0.5), 1)
-    weight = proxy.usable.astype(np.float64)
-    linear = proxy.linear.astype(np.float64)
     if side == 1:
-        return linear, weight
-    rows, columns = np.arange(0, h, side), np.arange(0, w, side)
-    area = np.add.reduceat(np.add.reduceat(np.ones((h, w)), rows, axis=0), columns, axis=1)
-    share = np.add.reduceat(np.add.reduceat(weight, rows, axis=0), columns, axis=1)
-    total = np.add.reduceat(np.add.reduceat(linear * weight[..., None], rows, axis=0), columns, axis=1)
+        return proxy.linear.astype(np.float64), proxy.usable.astype(np.float64)
+    total, share, area = sum_boxes(proxy.linear, proxy.usable, side)
     return total / np.where(share > 0, share, 1.0)[..., None], share / area

@@ -24,6 +24,10 @@ _FEWEST_CELLS: Final = 16
 """Fewer cells than this are no picture of a scene. (judgement)"""
 
 
+_DAYLIGHT_SETTING: Final = 0.01
+"""A recorded balance this near to daylight is taken for the fixed daylight setting, which tells nothing. (judgement)"""
+
+
 def measure(frame: Frame, recipe: Recipe | None = None) -> Cast:
     """Return the light of one frame, and how sure it is.
 
@@ -55,7 +59,7 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
     cells = cells_from_proxy(proxy)
     if np.count_nonzero(cells.ok) < _FEWEST_CELLS:
         return Cast(proxy.header, recipe.opponent, flags=(*flags, "nothing-measured"))
-    vote = cast_vote(cells, proxy.header.referred)
+    vote = cast_vote(cells, proxy.header.referred, _camera_light(proxy))
     light = light_from_weights(vote.weights)
     cct_k, duv = cct_duv_from_xy(light)
     yellow_blue, green_magenta = cast_from_xy(light, recipe.opponent)
@@ -69,11 +73,22 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
         duv=duv,
         mired=None if cct_k is None else float(mired_from_k(cct_k)),
         delta_e_2000=grey_delta_e_2000(light),
-        doubt_deg=doubt_deg(vote),
+        doubt_deg=doubt_deg(vote, cells, proxy.header.referred),
         readings=_readings(cells, recipe),
         flags=flags,
         evidence=_evidence(vote, cells),
     )
+
+
+def _camera_light(proxy: Proxy) -> Array | None:
+    """Return the light that the camera balanced for, None where it says nothing about this frame."""
+    matrix = proxy.header.daylight_from_decoded
+    if matrix is None or proxy.header.referred != "scene" or "balance-unusable" in proxy.header.flags:
+        return None
+    light = np.asarray(matrix @ np.ones(3), np.float64)
+    if not np.isfinite(light).all() or light.min() <= 0:
+        return None
+    return None if np.ptp(light) < _DAYLIGHT_SETTING * light.max() else light
 
 
 def _readings(cells: Cells, recipe: Recipe) -> dict[str, Reading]:

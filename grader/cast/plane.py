@@ -64,6 +64,11 @@ def ab_from_linear(linear: Array) -> Array:
     return np.asarray(np.log(np.where(lms > 0, lms, np.nan)) @ AB_FROM_LOG_LMS.T)
 
 
+def luminance(linear: Array) -> Array:
+    """Return the luminance Y (...) of working-light colours (..., 3)."""
+    return np.asarray(linear @ XYZ_FROM_REC2020[1])
+
+
 def linear_from_ab(ab: Array) -> Array:
     """Return the colour of luminance 1 at a place in the plane.
 

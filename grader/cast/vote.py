@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from grader.cast import plane
 from grader.cast.cells import Cells
+from grader.cast.natural import mean_log_density
 from grader.cast.plane import A_BINS, A_START, B_BINS, B_START, STEP
 from grader.colour import white
 from grader.model import XY, Referred
@@ -18,22 +19,33 @@ from grader.model import XY, Referred
 Array = NDArray[np.float64]
 
 _FLOOR: Final = 4e-6
-_GREY_WEIGHT, _EDGE_WEIGHT = 0.9, 1.25
-_GREY_BLUR, _EDGE_BLUR = 0.006, 0.02
+"""Share of votes that any light has, so that one empty bin does not rule it out. (judgement)"""
+_GREY_BLUR: Final = 0.006
 _GREY_SHARPNESS: Final = 10.0
-_EDGE_SHIFT: Final = {"scene": 0.03, "display": 0.07}
+"""How fast a cell stops counting as grey when its colour changes with its brightness; 5 to 20 give the same
+lights within 0.02 degrees. (judgement)"""
+_WEIGHTS: Final = np.array([0.35, 2.8, 2.65])
+"""Weight of grey cells, surface colours and edge colours. (fitted: benchmarks/light_fit.py DATA weights)"""
+PRIOR_POWER: Final = 1.65
+"""The scene prior against the evidence. (fitted: the same command)"""
+_TRUST: Final = {"scene": 1.0, "display": 0.6}
+"""Tone curves and earlier grading bend the colours of a finished picture. (judgement)"""
+_FULL_CELLS: Final = 256
+"""Fewer cells than this are a poor sample of a scene's colours. (judgement)"""
+_CAMERA_SPREAD, _CAMERA_FREEDOM = 0.03, 3.0
+"""Scale and degrees of freedom of a camera's own balance around the light, about 4 degrees with heavy tails. (judgement)"""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Vote:
     """What the cells say about the candidates.
 
-    ``grey`` and ``edge`` (C,) are the two evidences' log-likelihoods, ``log_likelihood`` their sum,
-    ``log_prior`` the prior, ``weights`` the posterior (sums to 1).
+    ``parts`` (3, C) are the weighted log-likelihoods of grey cells, surface colours and edge colours,
+    ``log_likelihood`` (C,) their sum, ``log_prior`` (C,) the prior, the camera's own balance in it,
+    ``weights`` (C,) the posterior (sums to 1).
     """
 
-    grey: Array
-    edge: Array
+    parts: Array
     log_likelihood: Array
     log_prior: Array
     weights: Array
@@ -67,7 +79,7 @@ def log_prior(referred: Referred) -> Array:
     """
     mired, duv = plane.mired_duv_from_xy(white.xy_from_linear(candidate_lights()))
     density = _scene_prior(mired, duv) if referred == "scene" else _display_prior(mired, duv)
-    return np.log(density / density.sum())
+    return np.asarray(np.log(density / density.sum()))
 
 
 def _bump(x: Array, centre: float, spread: float | Array) -> Array:
@@ -77,7 +89,7 @@ def _bump(x: Array, centre: float, spread: float | Array) -> Array:
 def _scene_prior(mired: Array, duv: Array) -> Array:
     daylight = _bump(mired, 175.0, np.where(mired > 175.0, 20.0, 40.0)) / 30.0
     anything = _bump(mired, 182.0, 140.0) / 140.0
-    return np.asarray((0.7 * daylight + 0.3 * anything + 1e-6) * _bump(duv, 0.0005, 0.007))
+    return np.asarray(((0.7 * daylight + 0.3 * anything + 1e-6) * _bump(duv, 0.0005, 0.007)) ** PRIOR_POWER)
 
 
 def _display_prior(mired: Array, duv: Array) -> Array:
@@ -86,90 +98,118 @@ def _display_prior(mired: Array, duv: Array) -> Array:
         return np.asarray(near / near.sum())
 
     return np.asarray(
-        0.3 * around_white(6.0, 0.001)
-        + 0.63 * around_white(35.0, 0.006)
-        + 0.07 * around_white(105.0, 0.015)
+        0.5 * around_white(6.0, 0.0015)
+        + 0.45 * around_white(35.0, 0.006)
+        + 0.05 * around_white(105.0, 0.015)
         + 1e-9
     )
 
 
-def cast_vote(cells: Cells, referred: Referred) -> Vote:
+def cast_vote(cells: Cells, referred: Referred, camera_light: Array | None = None) -> Vote:
     """Return what the cells of one frame say about every candidate light.
 
     Parameters
     ----------
     cells : Cells
     referred : 'scene' or 'display'
+    camera_light : (3,) float64, optional
+        The light that the camera itself balanced for. [working light, any scale]
 
     Returns
     -------
     Vote
     """
-    grey = _GREY_WEIGHT * np.log(grey_map(cells) + _FLOOR)
-    edge = _EDGE_WEIGHT * np.log(edge_map(cells, _EDGE_SHIFT[referred]) + _FLOOR)
-    prior = log_prior(referred)
-    return Vote(grey, edge, grey + edge, prior, weights_from_log(grey + edge + prior))
+    parts = _TRUST[referred] * _WEIGHTS[:, None] * evidence(cells)
+    likelihood = parts.sum(axis=0)
+    prior = log_prior(referred) + camera_log_weight(camera_light)
+    return Vote(parts, likelihood, prior, weights_from_log(likelihood + prior))
 
 
-def grey_map(cells: Cells) -> Array:
+def evidence(cells: Cells) -> Array:
+    """Return the three unweighted log-evidences of a frame, (3, C) float64."""
+    surfaces = splat(cells.ab[cells.ok], np.ones(int(cells.ok.sum())))
+    sample = min(1.0, cells.ok.sum() / _FULL_CELLS)
+    at = plane.candidate_bins()
+    return np.stack(
+        [
+            np.log(_spread(grey_histogram(cells), _GREY_BLUR) + _FLOOR),
+            sample * mean_log_density(surfaces, "surface").ravel()[at],
+            sample * mean_log_density(splat(*edge_votes(cells)), "edge").ravel()[at],
+        ]
+    )
+
+
+def camera_log_weight(camera_light: Array | None) -> Array:
+    """Return what the camera's own balance says about the candidates, (C,) float64.
+
+    A broad Student bump around the balance: cameras err by several degrees, and keep some of a warm light.
+
+    Parameters
+    ----------
+    camera_light : (3,) float64 or None
+        None where the camera stood at its daylight setting or recorded nothing: then no light is preferred.
+    """
+    if camera_light is None:
+        return np.zeros(len(candidates()))
+    place = plane.ab_from_linear(camera_light)
+    if not np.isfinite(place).all():
+        return np.zeros(len(candidates()))
+    squared = ((candidates() - place) ** 2).sum(axis=1) / _CAMERA_SPREAD**2
+    return np.asarray(-0.5 * (_CAMERA_FREEDOM + 2.0) * np.log1p(squared / _CAMERA_FREEDOM))
+
+
+def grey_histogram(cells: Cells) -> Array:
     """Return the votes of cells that look grey: brightness changes around them, colour does not.
 
-    Parameters
-    ----------
-    cells : Cells
+    After the grey index of Qian et al. 2019, with each cell's four neighbours.
 
     Returns
     -------
-    (C,) float64
-        Share of the votes at each candidate.
+    (A_BINS, B_BINS) float64
+        Sums to 1, or all zero where nothing voted.
     """
-    corner = cells.pairs(0)[:, :-1] & cells.pairs(1)[:-1]
+    change, colour, neighbours = np.zeros((3, *cells.ok.shape))
     log_y = np.log(cells.luminance)
-    down, right = np.diff(log_y, axis=0)[:, :-1], np.diff(log_y, axis=1)[:-1]
-    luminance_change = np.abs(down) + np.abs(right)
-    colour_change = 3.0 * (
-        np.linalg.norm(np.diff(cells.ab, axis=0)[:, :-1], axis=-1)
-        + np.linalg.norm(np.diff(cells.ab, axis=1)[:-1], axis=-1)
-    )
-    weight = cells.luminance[:-1, :-1] * luminance_change
-    weight = weight * np.exp(-_GREY_SHARPNESS * colour_change / (luminance_change + 1e-4))
-    return _spread(cells.ab[:-1, :-1][corner], weight[corner], _GREY_BLUR)
+    for axis in (0, 1):
+        both = cells.pairs(axis)
+        steps = (
+            both * np.abs(np.diff(log_y, axis=axis)),
+            both * 3.0 * np.linalg.norm(np.diff(cells.ab, axis=axis), axis=-1),
+            both,
+        )
+        for total, step in zip((change, colour, neighbours), steps, strict=True):
+            first, second = (np.s_[:-1], np.s_[1:]) if axis == 0 else (np.s_[:, :-1], np.s_[:, 1:])
+            total[first] += step
+            total[second] += step
+    weight = cells.luminance * change * np.exp(-_GREY_SHARPNESS * colour / (change + 1e-4))
+    voting = cells.ok & (neighbours > 0)
+    return splat(cells.ab[voting], (weight / np.maximum(neighbours, 1.0))[voting])
 
 
-def edge_map(cells: Cells, shift: float) -> Array:
-    """Return the votes of edges where all three channels move the same way.
-
-    Parameters
-    ----------
-    cells : Cells
-    shift : float
-        How much warmer than the light such edges are on average, along b.
+def edge_votes(cells: Cells) -> tuple[Array, Array]:
+    """Return the colours of edges where all three channels move the same way, weighted by their luminance.
 
     Returns
     -------
-    (C,) float64
+    places, weights : (n, 2), (n,) float64
     """
     places, weights = [], []
     for axis in (0, 1):
         step = np.diff(cells.linear, axis=axis)[cells.pairs(axis)]
         step = np.abs(step[(step > 0).all(axis=1) | (step < 0).all(axis=1)])
         places.append(plane.ab_from_linear(step))
-        weights.append(step @ plane.XYZ_FROM_REC2020[1])
-    return _spread(np.concatenate(places) - [0.0, shift], np.concatenate(weights), _EDGE_BLUR)
+        weights.append(plane.luminance(step))
+    return np.concatenate(places), np.concatenate(weights)
 
 
-def _spread(places: Array, weights: Array, blur: float) -> Array:
-    """Return weighted places as a normalised, smoothed histogram, read at the candidates."""
-    histogram = _splat(places, weights)
-    total = histogram.sum()
-    if total <= 0:
-        return np.full(len(candidates()), 1.0 / histogram.size)
-    smooth = _blur_matrix(A_BINS, blur) @ (histogram / total) @ _blur_matrix(B_BINS, blur)
+def _spread(histogram: Array, blur: float) -> Array:
+    """Return a histogram smoothed and read at the candidates."""
+    smooth = _blur_matrix(A_BINS, blur) @ histogram @ _blur_matrix(B_BINS, blur)
     return np.asarray(smooth.ravel()[plane.candidate_bins()])
 
 
-def _splat(places: Array, weights: Array) -> Array:
-    """Return a histogram on the grid, each vote shared bilinearly among the four nearest bins."""
+def splat(places: Array, weights: Array) -> Array:
+    """Return a normalised histogram on the grid, each vote shared bilinearly among the four nearest bins."""
     x = (places[:, 0] - A_START) / STEP - 0.5
     y = (places[:, 1] - B_START) / STEP - 0.5
     inside = (x >= 0) & (y >= 0) & (x < A_BINS - 1) & (y < B_BINS - 1)
@@ -182,7 +222,8 @@ def _splat(places: Array, weights: Array) -> Array:
     total += np.bincount(flat + B_BINS, weights * fx * (1 - fy), size)
     total += np.bincount(flat + 1, weights * (1 - fx) * fy, size)
     total += np.bincount(flat + B_BINS + 1, weights * fx * fy, size)
-    return np.asarray(total.reshape(A_BINS, B_BINS))
+    mass = total.sum()
+    return np.asarray((total / mass if mass > 0 else total).reshape(A_BINS, B_BINS))
 
 
 @cache
