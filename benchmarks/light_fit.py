@@ -56,7 +56,7 @@ class Data:
     def errors(self, lights, keep=slice(None)):
         t = self.to_sensor[self.sensor[keep]]
         found = np.maximum(np.einsum("nij,nj->ni", t, lights), 1e-9)
-        return doubt.angle_deg(found, np.einsum("nij,nj->ni", t, self.light[keep]))
+        return vote.angle_deg(found, np.einsum("nij,nj->ni", t, self.light[keep]))
 
 
 def load(path, cast=None):

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.cast.cells import Cells
-from grader.cast.vote import Vote, candidate_lights, weights_from_log
+from grader.cast.vote import Vote, angle_deg, candidate_lights, weights_from_log
 from grader.model import Referred
 
 Array = NDArray[np.float64]
@@ -20,20 +20,8 @@ _FITTED: Final[dict[Referred, tuple[float, ...]]] = {
 """Intercept, then one factor a sign. (fitted: benchmarks/light_fit.py DATA doubt)"""
 
 
-_MOST_DEG: Final = 12.0
+MOST_DEG: Final = 12.0
 """The lights of a shoot lie about so far apart: not to know the light at all is no worse. (judgement)"""
-
-
-def angle_deg(light: Array, other: Array) -> Array:
-    """Return the angle between lights of shape (..., 3) in degrees.
-
-    Examples
-    --------
-    >>> float(angle_deg(np.array([1.0, 0, 0]), np.array([0, 2.0, 0])))
-    90.0
-    """
-    cosine = (light * other).sum(axis=-1) / (np.linalg.norm(light, axis=-1) * np.linalg.norm(other, axis=-1))
-    return np.asarray(np.degrees(np.arccos(np.clip(cosine, -1.0, 1.0))))
 
 
 def signs(vote: Vote, cells: Cells) -> Array:
@@ -90,4 +78,4 @@ def doubt_deg(vote: Vote, cells: Cells, referred: Referred) -> float:
     """
     intercept, *factors = _FITTED[referred]
     expected = float(np.exp(intercept + signs(vote, cells) @ np.array(factors)))
-    return min(expected, _MOST_DEG)
+    return min(expected, MOST_DEG)

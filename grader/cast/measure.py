@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Final
 
 import numpy as np
@@ -9,6 +10,8 @@ from numpy.typing import NDArray
 
 from grader.cast.cells import Cells, cells_from_proxy
 from grader.cast.doubt import doubt_deg
+from grader.cast.flags import frame_flags, light_flags
+from grader.cast.halves import halves_apart
 from grader.cast.plane import GRID
 from grader.cast.proxy import build_proxy
 from grader.cast.readings import read_lights
@@ -22,8 +25,6 @@ Array = NDArray[np.float64]
 
 _FEWEST_CELLS: Final = 16
 """Fewer cells than this are no picture of a scene. (judgement)"""
-
-
 _DAYLIGHT_SETTING: Final = 0.01
 """A recorded balance this near to daylight is taken for the fixed daylight setting, which tells nothing. (judgement)"""
 
@@ -56,11 +57,25 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
     flags = proxy.header.flags
     if "grey" in flags:
         return Cast(proxy.header, recipe.opponent, flags=flags)
+    flags += frame_flags(proxy)
     cells = cells_from_proxy(proxy)
     if np.count_nonzero(cells.ok) < _FEWEST_CELLS:
-        return Cast(proxy.header, recipe.opponent, flags=(*flags, "nothing-measured"))
-    vote = cast_vote(cells, proxy.header.referred, _camera_light(proxy))
-    light = light_from_weights(vote.weights)
+        return Cast(proxy.header, recipe.opponent, flags=(*flags, "few-usable-pixels", "nothing-measured"))
+    referred = proxy.header.referred
+    vote = cast_vote(cells, referred, _camera_light(proxy))
+    halves = halves_apart(cells, referred)
+    doubt = doubt_deg(vote, cells, referred)
+    lights = read_lights(cells)
+    return replace(
+        _cast(light_from_weights(vote.weights), proxy, recipe),
+        doubt_deg=doubt,
+        readings=_readings(lights, recipe),
+        flags=flags + light_flags(cells, lights, halves, doubt),
+        evidence=_evidence(vote, cells),
+    )
+
+
+def _cast(light: XY, proxy: Proxy, recipe: Recipe) -> Cast:
     cct_k, duv = cct_duv_from_xy(light)
     yellow_blue, green_magenta = cast_from_xy(light, recipe.opponent)
     return Cast(
@@ -73,10 +88,6 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
         duv=duv,
         mired=None if cct_k is None else float(mired_from_k(cct_k)),
         delta_e_2000=grey_delta_e_2000(light),
-        doubt_deg=doubt_deg(vote, cells, proxy.header.referred),
-        readings=_readings(cells, recipe),
-        flags=flags,
-        evidence=_evidence(vote, cells),
     )
 
 
@@ -91,12 +102,8 @@ def _camera_light(proxy: Proxy) -> Array | None:
     return None if np.ptp(light) < _DAYLIGHT_SETTING * light.max() else light
 
 
-def _readings(cells: Cells, recipe: Recipe) -> dict[str, Reading]:
-    found = {}
-    for name, light in read_lights(cells).items():
-        if light.min() > 0:
-            found[name] = Reading(*_cast_of(light, recipe))
-    return found
+def _readings(lights: dict[str, Array], recipe: Recipe) -> dict[str, Reading]:
+    return {name: Reading(*_cast_of(light, recipe)) for name, light in lights.items() if light.min() > 0}
 
 
 def _cast_of(light: Array, recipe: Recipe) -> tuple[float, float]:

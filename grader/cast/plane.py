@@ -162,5 +162,9 @@ def candidate_bins() -> NDArray[np.intp]:
     """
     linear = linear_from_ab(grid_places())
     mired, duv = mired_duv_from_xy(white.xy_from_linear(linear))
-    possible = (mired > _MIRED_RANGE[0]) & (mired < _MIRED_RANGE[1]) & (np.abs(duv) < _DUV_LIMIT)
-    return np.flatnonzero(possible & (linear.min(axis=1) > 0))
+    return np.flatnonzero(is_plausible(mired, duv) & (linear.min(axis=1) > 0))
+
+
+def is_plausible(mired: Array, duv: Array) -> NDArray[np.bool_]:
+    """Return where lamps and daylight are found at all, [mired] and [CIE 1960 uv]."""
+    return (mired > _MIRED_RANGE[0]) & (mired < _MIRED_RANGE[1]) & (np.abs(duv) < _DUV_LIMIT)

@@ -260,3 +260,15 @@ def covariance(weights: Array) -> Array:
     places = candidates()
     off = places - weights @ places
     return np.asarray((off * weights[:, None]).T @ off)
+
+
+def angle_deg(light: Array, other: Array) -> Array:
+    """Return the angle between lights of shape (..., 3) in degrees.
+
+    Examples
+    --------
+    >>> float(angle_deg(np.array([1.0, 0, 0]), np.array([0, 2.0, 0])))
+    90.0
+    """
+    cosine = (light * other).sum(axis=-1) / (np.linalg.norm(light, axis=-1) * np.linalg.norm(other, axis=-1))
+    return np.asarray(np.degrees(np.arccos(np.clip(cosine, -1.0, 1.0))))
