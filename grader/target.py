@@ -96,8 +96,11 @@ class Target:
                 return WriteFailed(
                     "the output folder is gone", path=self.folder, hint=f"bring it back, {_RESUME}"
                 )
-            with trial.open("xb") as stream:
-                stream.write(b"\0")
+            handle = os.open(trial, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o666)
+            try:
+                os.write(handle, b"\0")
+            finally:
+                os.close(handle)
         except OSError as error:
             return _unusable(self.folder, error, f"make it writable, {_RESUME}")
         finally:

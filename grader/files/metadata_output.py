@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import re
 import struct
 from typing import Final, Literal
 
@@ -31,6 +32,7 @@ _PLACE_DATASETS: Final = frozenset({26, 27, 90, 92, 95, 100, 101})
 """IPTC-IIM 4.2 record 2: content location, city, sublocation, state, country."""
 _EXIF_VERSION, _COLOUR_SPACE, _WIDTH, _HEIGHT = 0x9000, 0xA001, 0xA002, 0xA003
 _SRGB, _UNCALIBRATED = 1, 65_535
+_NOT_IN_XML: Final = re.compile(r"[^\t\n\r\x20-\ud7ff\ue000-\ufffd\U00010000-\U0010ffff]")
 _CHROMA_PLACE, _CENTRED = 0x0213, 1
 """YCbCrPositioning, which Exif asks of a JPEG; libjpeg's chroma samples lie centred."""
 
@@ -189,7 +191,19 @@ def _record(frame: Frame, output: Output, correction: Correction) -> dict[str, s
     if frame.header.referred == "scene":
         values["Tone"] = output.tone
         values["ExposureEV"] = f"{output.exposure_ev:g}"
-    return {name: value for name, value in values.items() if value}
+    return {name: _legal(value) for name, value in values.items() if value}
+
+
+def _legal(text: str) -> str:
+    r"""Return text as XML can hold it (XML 1.0, 2.2 "Characters"): what it cannot, file names may have.
+
+    Examples
+    --------
+    >>> _legal("caf\udce9\x1b.tif")
+    'caf\\xe9\\x1b.tif'
+    """
+    named = text.encode("utf-8", "surrogateescape").decode("utf-8", "backslashreplace")
+    return _NOT_IN_XML.sub(lambda found: found[0].encode("unicode_escape").decode("ascii"), named)
 
 
 def _numbers(values: object) -> str:

@@ -90,10 +90,9 @@ def differences(out: Path, whole: Path) -> list[str]:
 
 
 def at_every_step(shoot: Path, folder: Path, preset: str) -> dict:
-    whole, kills, different = folder / "whole", 0, []
+    whole, out, kills, different = folder / "whole", folder / "out", 0, []
     assert in_a_fork(lambda: grade(shoot, whole, preset)) == 0
     for step in range(10_000):
-        out = folder / "out"
         shutil.rmtree(out, ignore_errors=True)
         code = in_a_fork(dying_at(step, lambda: grade(shoot, out, preset)))
         if code == 0:

@@ -118,7 +118,9 @@ def test_an_idle_worker_that_is_stopped_is_replaced(monkeypatch: pytest.MonkeyPa
     assert (first.result, second.result) == (-1, -2)
 
 
-def test_a_job_no_worker_can_begin_fails_and_does_not_go_round_for_ever(monkeypatch: pytest.MonkeyPatch) -> None:
+def test_a_job_no_worker_can_begin_fails_and_does_not_go_round_for_ever(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
     monkeypatch.setattr(processes, "_serve", os._exit)
     (outcome,) = workers.run(operator.neg, [1], Pool(processes=1))
     assert isinstance(outcome.error, WorkerFailed)

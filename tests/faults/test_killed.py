@@ -46,7 +46,17 @@ def test_killed_at_20_random_moments_of_40_frames(preset: str, tmp_path: Path) -
 
 def test_killed_with_workers_that_leave_with_it(tmp_path: Path) -> None:
     shoot, out, whole = write_shoot(tmp_path / "shoot", 24), tmp_path / "out", tmp_path / "whole"
-    command = [sys.executable, "-m", "grader", "neutralise", str(shoot), "--workers", "2", "--resume", "--quiet"]
+    command = [
+        sys.executable,
+        "-m",
+        "grader",
+        "neutralise",
+        str(shoot),
+        "--workers",
+        "2",
+        "--resume",
+        "--quiet",
+    ]
     chance = random.Random(7)
     for lines in sorted(chance.sample(range(2, 60), 3)):
         process = subprocess.Popen([*command, "--out", str(out)])
