@@ -56,7 +56,8 @@ def _own(module):
     """Return a module's public functions and classes: what it lists, else what it defines, in order."""
     listed = getattr(module, "__all__", None)
     if listed is not None:
-        return [getattr(module, name) for name in listed]
+        named = [getattr(module, name) for name in listed]
+        return [value for value in named if inspect.isfunction(value) or inspect.isclass(value)]
     return [
         value
         for name, value in vars(module).items()

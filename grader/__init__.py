@@ -6,7 +6,8 @@ Everything a script needs is here; the modules behind it load when they are firs
 Examples
 --------
 >>> import numpy as np, grader
->>> frame = grader.Frame.from_array(np.full((64, 64, 3), 118, np.uint8))
+>>> greys = np.random.default_rng(1).integers(40, 200, (64, 64, 1), np.uint8)
+>>> frame = grader.Frame.from_array(greys.repeat(3, axis=2))
 >>> sorted(grader.measure(frame).readings)
 ['grey-edge', 'grey-world', 'shades-of-grey', 'white-patch']
 """

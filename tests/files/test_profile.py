@@ -253,7 +253,7 @@ def test_a_grey_picture_that_became_coloured_gets_a_colour_profile(tmp_path: Pat
 
 def test_a_grey_picture_may_carry_a_colour_profile(tmp_path: Path) -> None:
     frame = files.read(tagged(tmp_path, files.profile_bytes("opRGB"), picture(8, 1)[..., 0]))
-    assert not frame.header.flags
+    assert frame.header.flags == ("grey",)
     assert frame.space.name == "opRGB"
 
 
