@@ -1,6 +1,6 @@
 """Make the sample photographs and their truth.json: an evening pottery auction in a village hall.
 
-    python sample_images/make_samples.py            all frames (a quarter of an hour of one core)
+    python sample_images/make_samples.py            all frames (10 to 15 minutes of one core)
     python sample_images/make_samples.py 4 17       frames 4 and 17 only, and truth.json
 
 Everything is invented and seeded: the same numbers come out each time.  Pictures are traced in 31 spectral
