@@ -214,12 +214,16 @@ def fit_doubt(signs, errors):
 def print_doubt(path):
     for referred in ("scene", "display"):
         sets = [load(path)] if referred == "scene" else [load(path, random_casts(568, s)) for s in CASTS]
-        signs, errors = [], []
+        signs, errors, acted_on = [], [], []
         for data in sets:
             votes = [vote.cast_vote(c, referred) for c in data.cells]
             signs.append([doubt.signs(v, c) for v, c in zip(votes, data.cells, strict=True)])
-            errors.append(data.errors(np.array([v.weights @ vote.candidate_lights() for v in votes])))
-            print(referred, told(errors[-1]))
+            lights = np.array([v.weights @ vote.candidate_lights() for v in votes])
+            doubts = [doubt.doubt_deg(v, c, referred) for v, c in zip(votes, data.cells, strict=True)]
+            believed = [doubt.believed_light(*pair, referred) for pair in zip(lights, doubts, strict=True)]
+            errors.append(data.errors(lights))
+            acted_on.append(data.errors(np.array(believed)))
+            print(referred, "mean light:", told(errors[-1]), "  light acted on:", told(acted_on[-1]))
         blocks = np.concatenate([np.arange(len(e)) * BLOCKS // len(e) for e in errors])
         signs, errors = np.concatenate(signs), np.concatenate(errors)
         expected = np.empty(len(errors))
@@ -227,7 +231,7 @@ def print_doubt(path):
             k = fit_doubt(signs[blocks != block], errors[blocks != block])
             expected[blocks == block] = np.exp(k[0] + signs[blocks == block] @ k[1:])
         print(referred, "coefficients", fit_doubt(signs, errors).round(3))
-        print_tenths(expected, errors)
+        print_tenths(expected, np.concatenate(acted_on))
 
 
 def print_tenths(expected, errors):

@@ -20,6 +20,9 @@ _FITTED: Final[dict[Referred, tuple[float, ...]]] = {
 """Intercept, then one factor a sign. (fitted: benchmarks/light_fit.py DATA doubt)"""
 
 
+_LEAVE_BELOW, _BELIEVE_ABOVE = 0.8, 1.2
+"""Casts of a finished picture, in units of their doubt, that are left alone and that are believed whole.
+(judgement: with these no packaged photograph under a cast of 40 mired or more ends worse than it began)"""
 MOST_DEG: Final = 12.0
 """The lights of a shoot lie about so far apart: not to know the light at all is no worse. (judgement)"""
 
@@ -79,3 +82,31 @@ def doubt_deg(vote: Vote, cells: Cells, referred: Referred) -> float:
     intercept, *factors = _FITTED[referred]
     expected = float(np.exp(intercept + signs(vote, cells) @ np.array(factors)))
     return min(expected, MOST_DEG)
+
+
+def believed_light(light: Array, doubt_deg: float, referred: Referred) -> Array:
+    """Return the light to act on: in a finished picture, a cast that is no larger than its doubt is none.
+
+    Somebody balanced a display-referred picture already, so the burden of proof lies with the measurement.
+    The light of a scene-referred frame is returned as it is.
+
+    Parameters
+    ----------
+    light : (3,) float64
+        Mean light of the vote. [working light]
+    doubt_deg : float
+        Its doubt. [degrees]
+    referred : 'scene' or 'display'
+
+    Returns
+    -------
+    (3,) float64
+        Of unit length.
+    """
+    unit = light / np.linalg.norm(light)
+    if referred == "scene":
+        return np.asarray(unit)
+    neutral = np.full(3, 3.0**-0.5)
+    size = float(angle_deg(unit, neutral)) / doubt_deg
+    share = np.clip((size - _LEAVE_BELOW) / (_BELIEVE_ABOVE - _LEAVE_BELOW), 0.0, 1.0)
+    return np.asarray(neutral + share * (unit - neutral))

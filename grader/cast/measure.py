@@ -9,13 +9,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.cast.cells import Cells, cells_from_proxy
-from grader.cast.doubt import doubt_deg
+from grader.cast.doubt import believed_light, doubt_deg
 from grader.cast.flags import frame_flags, light_flags
 from grader.cast.halves import halves_apart
 from grader.cast.plane import GRID
 from grader.cast.proxy import build_proxy
 from grader.cast.readings import read_lights
-from grader.cast.vote import Vote, cast_vote, light_from_weights
+from grader.cast.vote import Vote, candidate_lights, cast_vote
 from grader.colour.difference import grey_delta_e_2000
 from grader.colour.opponent import cast_from_xy
 from grader.colour.white import cct_duv_from_xy, mired_from_k, xy_from_linear
@@ -67,7 +67,7 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
     doubt = doubt_deg(vote, cells, referred)
     lights = read_lights(cells)
     return replace(
-        _cast(light_from_weights(vote.weights), proxy, recipe),
+        _cast(believed_light(vote.weights @ candidate_lights(), doubt, referred), proxy, recipe),
         doubt_deg=doubt,
         readings=_readings(lights, recipe),
         flags=flags + light_flags(cells, lights, halves, doubt),
@@ -75,19 +75,21 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
     )
 
 
-def _cast(light: XY, proxy: Proxy, recipe: Recipe) -> Cast:
-    cct_k, duv = cct_duv_from_xy(light)
-    yellow_blue, green_magenta = cast_from_xy(light, recipe.opponent)
+def _cast(light: Array, proxy: Proxy, recipe: Recipe) -> Cast:
+    x, y = xy_from_linear(light)
+    xy: XY = (float(x), float(y))
+    cct_k, duv = cct_duv_from_xy(xy)
+    yellow_blue, green_magenta = cast_from_xy(xy, recipe.opponent)
     return Cast(
         header=proxy.header,
         opponent=recipe.opponent,
         yellow_blue=float(yellow_blue),
         green_magenta=float(green_magenta),
-        white_xy=light,
+        white_xy=xy,
         cct_k=cct_k,
         duv=duv,
         mired=None if cct_k is None else float(mired_from_k(cct_k)),
-        delta_e_2000=grey_delta_e_2000(light),
+        delta_e_2000=grey_delta_e_2000(xy),
     )
 
 

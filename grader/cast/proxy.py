@@ -59,7 +59,7 @@ def build_proxy(frame: Frame) -> Proxy:
         averaged = average_integers(pixels, tables, *limits, width, step, matrix)
     else:
         linear = _linear_floats(pixels[::step, ::step], frame.space.curves)
-        averaged = average_floats(linear, *_float_limits(linear), max(width // step, 1), matrix)
+        averaged = average_floats(linear, *_float_limits(linear), width / step, matrix)
     linear, usable, (clipped, dark, empty) = averaged
     return Proxy(linear, usable, frame.header, float(clipped), float(dark), float(empty))
 

@@ -82,18 +82,20 @@ def average_integers(
 
 @jit
 def average_floats(
-    pixels: Float32, clipped: float, dark: float, width: int, matrix: NDArray[np.float64]
+    pixels: Float32, clipped: float, dark: float, width: float, matrix: NDArray[np.float64]
 ) -> Averaged:
-    """Return the same for linear floating-point pixels; what is not a number counts as empty."""
+    """Return the same for linear floating-point pixels, ``width`` of which make a cell; what is not a number is empty."""
     height_px, width_px = pixels.shape[0], pixels.shape[1]
-    h, w = (height_px + width - 1) // width, (width_px + width - 1) // width
+    h, w = int(np.ceil(height_px / width - 1e-9)), int(np.ceil(width_px / width - 1e-9))
     linear, usable, left_out = np.zeros((h, w, 3), np.float32), np.zeros((h, w), np.float32), np.zeros(4)
     for cy in range(h):
         sums, used = np.zeros((w, 3)), np.zeros(w)
         seen = np.zeros(w)
-        for y in range(cy * width, min((cy + 1) * width, height_px)):
+        for y in range(
+            int(np.ceil(cy * width - 1e-9)), min(int(np.ceil((cy + 1) * width - 1e-9)), height_px)
+        ):
             for x in range(width_px):
-                cx = x // width
+                cx = min(int(x / width + 1e-9), w - 1)
                 seen[cx] += 1.0
                 left_out[3] += 1.0
                 r, g, b = pixels[y, x, 0], pixels[y, x, 1], pixels[y, x, 2]
