@@ -180,7 +180,8 @@ class Batch:
             self._measured[path] = self.run.add(line)
         elif known is not None:
             self.casts[path] = known
-            self._measured[path] = self.run.keep(measured_line(path, known))
+            line = measured_line(path, known)
+            self._measured[path] = self.run.keep(line) if self._earlier.holds(line) else self.run.add(line)
 
     def _plan(self) -> list[Line]:
         paths = [source.path for source in self.sources if source.path in self.casts]

@@ -14,7 +14,7 @@ from typing import Any, Final
 
 from grader.errors import DamagedFile, GraderError, WorkerFailed
 from grader.log import cast_from_line, correction_from_line, written_from_line
-from grader.log_file import Line, Log, settings_of
+from grader.log_file import Line, Log, encode_line, settings_of
 from grader.model import Cast, Correction, Counts, Opponent, Written
 
 _MOST_TRIES: Final = 2
@@ -60,6 +60,14 @@ class Earlier:
             return None
         usable = cast.header.sha256 is not None and cast.header.file == file and cast.opponent == opponent
         return cast if usable else None
+
+    def holds(self, line: Line) -> bool:
+        """Whether the log has exactly this frame line already, but for how long it took."""
+        there = self._line(line["file"], line["status"])
+        try:
+            return there is not None and _same_but_for_time(there, line)
+        except ValueError:  # figures that JSON does not have
+            return False
 
     def finished(self, file: str, target: str) -> Finished | None:
         """Return the output written for a file under the same settings and name."""
@@ -131,6 +139,10 @@ class Earlier:
 
     def _line(self, file: str, status: str) -> Line | None:
         return None if self._log is None else self._log.lines.get(file, {}).get(status)
+
+
+def _same_but_for_time(one: Line, other: Line) -> bool:
+    return encode_line(one | {"seconds": None}) == encode_line(other | {"seconds": None})
 
 
 def _has_output(line: Line) -> bool:

@@ -125,6 +125,7 @@ def _is_same_run(earlier: Line, first: Line) -> bool:
     """Whether an earlier run line says what this run's would, but for when and how it was started."""
     command = earlier.get("command")
     plain = isinstance(earlier.get("started"), str) and isinstance(command, list)
+    plain = plain and all(isinstance(word, str) for word in command or ())
     told_apart = {"started", "command"}
     return plain and {k: v for k, v in earlier.items() if k not in told_apart} == {
         k: v for k, v in json.loads(encode_line(first)).items() if k not in told_apart

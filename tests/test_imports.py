@@ -35,7 +35,7 @@ ALLOWED = {
     "jobs": LEAVES | {"cast", "colour", "files", "pixels", "target"},
     "shootfile": LEAVES | {"cast", "colour", "files", "preset"},
     "reporting": LEAVES | {"files", "log", "pixels", "report"},
-    "checking": LEAVES | {"cast", "files", "log", "workers"},
+    "checking": LEAVES | {"cast", "colour", "files", "log", "resume", "room", "workers"},
     "exporting": LEAVES | {"cast", "clf", "log", "preset"},
     "passes": LEAVES
     | {"cast", "colour", "halt", "jobs", "log", "preset", "records", "resume", "room", "run", "shootfile"}

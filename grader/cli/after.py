@@ -59,7 +59,10 @@ is an estimate like any other: a large one asks for your eye, it is no proof."""
     "--log", type=click.Path(dir_okay=False), metavar="FILE", help="The log. [DIR/grader-log.jsonl]"
 )
 @click.option(
-    "--tolerance", type=click.FloatRange(min=0), metavar="DE2000", help="Largest residual cast of an output."
+    "--tolerance",
+    type=click.FloatRange(min=0),
+    metavar="DE2000",
+    help="How far the cast measured in an output may lie from its correction's aim.",
 )
 @click.option(
     "--workers", type=click.IntRange(min=0), metavar="N", help="Processes; 0 = this one only. [cores]"

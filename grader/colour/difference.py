@@ -70,18 +70,20 @@ def _hue_weight(hue: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.asarray(1 + sum(k * np.cos(np.radians(n * hue + phase)) for k, n, phase in cosines))
 
 
-def grey_delta_e_2000(xy: ArrayLike) -> float:
+def grey_delta_e_2000(xy: ArrayLike, without_xy: ArrayLike = D65_XY) -> float:
     """Return Delta E 2000 between a mid grey (L* = 50) under a cast and the same grey without.
 
     Parameters
     ----------
     xy : (2,) array_like
         Where the light puts a neutral, CIE 1931 xy; neutral is D65.
+    without_xy : (2,) array_like
+        Where it lies without the cast.
 
     Examples
     --------
     >>> grey_delta_e_2000(D65_XY)
     0.0
     """
-    under, without = (cielab_from_xyz(_MID_GREY_Y * xyz_from_xy(light)) for light in (xy, D65_XY))
+    under, without = (cielab_from_xyz(_MID_GREY_Y * xyz_from_xy(light)) for light in (xy, without_xy))
     return float(delta_e_2000(under, without))
