@@ -16,7 +16,7 @@ from grader.model import Cast
 
 Array = NDArray[np.float64]
 
-_FEWEST: Final = 5
+_FEWEST: Final = 8
 _MOST: Final = 600
 """Points beyond which neighbours are put together: Theil-Sen looks at all pairs."""
 _CONFIDENCE: Final = 0.95
@@ -47,7 +47,7 @@ def slope_of(times_s: Array, values: Array) -> Slope | None:
     Returns
     -------
     Slope or None
-        In that unit per hour; None for fewer than five frames, or where the times are unknown or all the same.
+        In that unit per hour; None for fewer than eight frames, or where the times are unknown or all the same.
 
     References
     ----------
@@ -58,7 +58,7 @@ def slope_of(times_s: Array, values: Array) -> Slope | None:
 
     Examples
     --------
-    >>> slope_of(np.arange(0.0, 3600.0, 600.0), np.array([200.0, 201, 202, 203, 204, 205])).per_hour
+    >>> slope_of(np.arange(0.0, 4800.0, 600.0), np.arange(200.0, 208.0)).per_hour
     6.0
     """
     if len(values) < _FEWEST or not np.isfinite(times_s).all() or np.ptp(times_s) <= 0.0:
@@ -152,9 +152,14 @@ def _thinned(hours: Array, values: Array) -> tuple[Array, Array]:
 
 
 def _widening(residuals: Array) -> float:
-    """Return the square root of frames per independent frame, from the first autocorrelation."""
+    """Return the square root of frames per independent frame, from the first autocorrelation.
+
+    The autocorrelation of a short series comes out too low; the correction is that of M. G. Kendall, "Note
+    on bias in the estimation of autocorrelation", Biometrika 41, 1954, doi:10.1093/biomet/41.3-4.403.
+    """
     off = residuals - np.median(residuals)
     power = float(off @ off)
     together = float(off[1:] @ off[:-1]) / power if power > 0.0 else 0.0
+    together = (len(off) * together + 1.0) / (len(off) - 4.0)
     together = min(max(together, 0.0), 0.9)
     return math.sqrt((1.0 + together) / (1.0 - together))

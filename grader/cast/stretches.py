@@ -16,9 +16,16 @@ Array = NDArray[np.float64]
 
 WORTH: Final = 6.0
 """Most independent frames that a stretch is worth against the prior. (tuned on simulated shoots)"""
+_TRUST: Final = 0.5
+_WITNESS_REACH: Final = 5
+_WITNESS_PROBABILITY: Final = 0.5
+"""A switch must also show, roughly there, when each frame's evidence is trusted half: neighbours show the same
+things and err together. (tuned on simulated shoots)"""
 _WANDER: Final = 0.002
 """Random step of the light from frame to frame while switches are sought. (tuned on simulated shoots)"""
 _SWITCH_PROBABILITY: Final = 0.5
+_SURE_PROBABILITY: Final = 0.6
+"""Of a jump at one frame: two neighbours that are both so sure cannot be one jump. (probabilities)"""
 _SWITCH_REACH: Final = 2
 """A switch may be spread over this many frames to either side."""
 _LEAST_STEP_DEG: Final = 1.5
@@ -73,9 +80,11 @@ def find_switches(log_maps: Maps, log_prior: Array, odds: Array) -> list[int]:
         Ascending; never 0.
     """
     course = shoot_course.follow(log_maps, log_prior, odds, _WANDER)
-    switches = _declared(course.jumps)
+    doubtful = shoot_course.follow(log_maps * np.float32(_TRUST), log_prior, odds, _WANDER)
+    witnessed = np.convolve(doubtful.jumps, np.ones(2 * _WITNESS_REACH + 1), "full")[_WITNESS_REACH:]
+    switches = [at for at in _declared(course.jumps) if witnessed[at] >= _WITNESS_PROBABILITY]
     while True:
-        steps = [_step_deg(course, switches, at) for at in range(len(switches))]
+        steps = [_step_deg(log_maps, log_prior, switches, at) for at in range(len(switches))]
         if not steps or min(steps) >= _LEAST_STEP_DEG:
             return switches
         del switches[int(np.argmin(steps))]
@@ -108,12 +117,15 @@ def measure_light(log_maps: Maps, log_prior: Array, clock: Array) -> Light:
 
 
 def _declared(jumps: Array) -> list[int]:
-    """Return where jumps are likelier than not, each at the middle of the frames it may be spread over."""
+    """Return where the light jumps: at every frame that is sure of it, however near the next, and elsewhere
+    at the middle of the few frames over which a likely jump is spread."""
+    found = np.flatnonzero(jumps >= _SURE_PROBABILITY).tolist()
     left = jumps.copy()
-    found: list[int] = []
+    for at in found:
+        left[max(at - _SWITCH_REACH, 0) : at + _SWITCH_REACH + 1] = 0.0
     reach = np.ones(2 * _SWITCH_REACH + 1)
     while True:
-        near = np.convolve(left, reach, "same") if len(left) >= len(reach) else np.full(len(left), left.sum())
+        near = np.convolve(left, reach, "full")[_SWITCH_REACH : _SWITCH_REACH + len(left)]
         peak = int(near.argmax())
         if near[peak] < _SWITCH_PROBABILITY:
             return sorted(found)
@@ -123,12 +135,17 @@ def _declared(jumps: Array) -> list[int]:
         left[first:last] = 0.0
 
 
-def _step_deg(course: Course, switches: list[int], at: int) -> float:
+def _step_deg(log_maps: Maps, log_prior: Array, switches: list[int], at: int) -> float:
     """Return how far the light moves at a switch, from a few frames on either side."""
     here = switches[at]
     first = max(here - _STEP_FRAMES, switches[at - 1] if at else 0)
-    last = min(here + _STEP_FRAMES, switches[at + 1] if at + 1 < len(switches) else len(course.places))
-    before, after = course.places[first:here].mean(axis=0), course.places[here:last].mean(axis=0)
+    last = min(here + _STEP_FRAMES, switches[at + 1] if at + 1 < len(switches) else len(log_maps))
+    before, after = (
+        shoot_course.place_of(
+            shoot_course.pooled(part.sum(axis=0, dtype=np.float64), log_prior, len(part), WORTH)
+        )
+        for part in (log_maps[first:here], log_maps[here:last])
+    )
     return float(shoot_course.degrees_apart(before, after))
 
 
