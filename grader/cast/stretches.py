@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.cast import plane, shoot_course, vote
-from grader.cast.shoot_course import Course, Maps
+from grader.cast.shoot_course import Maps
 from grader.colour.white import cct_duv_from_xy, xy_from_cct_duv, xy_from_linear
 
 Array = NDArray[np.float64]
@@ -117,8 +117,11 @@ def measure_light(log_maps: Maps, log_prior: Array, clock: Array) -> Light:
 
 
 def _declared(jumps: Array) -> list[int]:
-    """Return where the light jumps: at every frame that is sure of it, however near the next, and elsewhere
-    at the middle of the few frames over which a likely jump is spread."""
+    """Return where the light jumps, ascending.
+
+    That is at every frame that is sure of it, however near the next, and elsewhere at the middle of the few
+    frames over which a likely jump is spread.
+    """
     found = np.flatnonzero(jumps >= _SURE_PROBABILITY).tolist()
     left = jumps.copy()
     for at in found:
