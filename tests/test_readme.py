@@ -29,7 +29,12 @@ def test_a_session_runs_as_written(name: str, tmp_path: Path) -> None:
     environment = {**os.environ, "PATH": f"{Path(sys.executable).parent}{os.pathsep}{os.environ['PATH']}"}
     for command in commands(SESSIONS[name]):
         done = subprocess.run(
-            ["bash", "-c", command], cwd=tmp_path, env=environment, capture_output=True, text=True, check=False
+            ["bash", "-c", command],
+            cwd=tmp_path,
+            env=environment,
+            capture_output=True,
+            text=True,
+            check=False,
         )
         assert done.returncode == 0, f"{command}\n{done.stdout[-2000:]}\n{done.stderr[-2000:]}"
     assert {path.name for path in (tmp_path / "sample_images").iterdir()} == {

@@ -60,8 +60,8 @@ def test_a_job_that_hangs_is_ended() -> None:
 def test_after_a_stop_no_further_job_begins(pool: workers.Pool) -> None:
     stop = workers.Stop()
     seen = []
-    for outcome in workers.run(operator.neg, range(1000), pool, stop):
-        seen.append(outcome.job)
+    for done in workers.run(operator.neg, range(1000), pool, stop):
+        seen.append(done.job)
         stop.ask()
     assert len(seen) <= 4
 

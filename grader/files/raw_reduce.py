@@ -77,7 +77,14 @@ def _cell_px(shape: tuple[int, ...], period: int, target_px: int) -> int:
 
 
 @jit
-def _average(mosaic, pattern, black, top, saturated, cell):  # type: ignore[no-untyped-def]  # noqa: C901 - one loop
+def _average(  # noqa: C901 - one loop
+    mosaic: NDArray[Any],
+    pattern: NDArray[np.int64],
+    black: NDArray[np.int64],
+    top: NDArray[np.int64],
+    saturated: NDArray[np.int64],
+    cell: int,
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.int64]]:
     """Average the whole periods of the filter array in each cell, leaving out those with a clipped photosite.
 
     Returns sums (h, w, 4) above black by colour, how often each colour stands in a period (4,), and how many
