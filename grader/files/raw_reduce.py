@@ -84,7 +84,7 @@ def _average(  # noqa: C901 - one loop
     top: NDArray[np.int64],
     saturated: NDArray[np.int64],
     cell: int,
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.int64]]:
+) -> tuple[NDArray[np.float64], NDArray[np.signedinteger[Any]], NDArray[np.int64]]:
     """Average the whole periods of the filter array in each cell, leaving out those with a clipped photosite.
 
     Returns sums (h, w, 4) above black by colour, how often each colour stands in a period (4,), and how many
