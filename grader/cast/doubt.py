@@ -23,6 +23,7 @@ _FITTED: Final[dict[Referred, tuple[float, ...]]] = {
 _LEAVE_BELOW, _BELIEVE_ABOVE = 0.8, 1.2
 """Casts of a finished picture, in units of their doubt, that are left alone and that are believed whole.
 (judgement: with these no packaged photograph under a cast of 40 mired or more ends worse than it began)"""
+_FLAT, _NOISE = 0.004, 0.4
 MOST_DEG: Final = 12.0
 """The lights of a shoot lie about so far apart: not to know the light at all is no worse. (judgement)"""
 
@@ -64,6 +65,23 @@ def colour_spread(cells: Cells) -> float:
     return float(np.sqrt(cells.ab[cells.ok].var(axis=0).sum()))
 
 
+def is_no_picture(cells: Cells) -> bool:
+    """Return whether a frame is noise or one flat colour, which says nothing about the light.
+
+    Neighbouring cells of photographs are alike in brightness (correlation 0.64 at the least in 568 of them, 0 in
+    noise), and their colours vary (standard deviation 0.0046 at the least).
+    """
+    if colour_spread(cells) < _FLAT:
+        return True
+    log_y = np.log(cells.luminance)
+    down, right = cells.pairs(0), cells.pairs(1)
+    first = np.concatenate([log_y[:-1][down], log_y[:, :-1][right]])
+    second = np.concatenate([log_y[1:][down], log_y[:, 1:][right]])
+    if len(first) < 2 or min(np.ptp(first), np.ptp(second)) == 0:
+        return True
+    return float(np.corrcoef(first, second)[0, 1]) < _NOISE
+
+
 def doubt_deg(vote: Vote, cells: Cells, referred: Referred) -> float:
     """Return the expected error of a vote's mean light.
 
@@ -79,6 +97,8 @@ def doubt_deg(vote: Vote, cells: Cells, referred: Referred) -> float:
     float
         Expected recovery angle. [degrees]
     """
+    if is_no_picture(cells):
+        return MOST_DEG
     intercept, *factors = _FITTED[referred]
     expected = float(np.exp(intercept + signs(vote, cells) @ np.array(factors)))
     return min(expected, MOST_DEG)

@@ -28,16 +28,15 @@ _HIGH_DOUBT_DEG: Final = 4.5
 _OUTSIDE_READINGS: Final = 3
 
 
-def frame_flags(proxy: Proxy) -> tuple[str, ...]:
+def frame_flags(proxy: Proxy, cells: Cells) -> tuple[str, ...]:
     """Return the flags that need no light: ``clipped`` and ``dark``."""
-    found = []
-    if proxy.clipped_fraction > _CLIPPED_SHARE:
-        found.append("clipped")
-    lit = proxy.linear[proxy.usable > 0].astype(np.float64)
-    dim = lit.size > 0 and np.percentile(plane.luminance(lit), 90) < _DARK_LUMINANCE
-    if dim or proxy.dark_fraction > _DARK_SHARE:
-        found.append("dark")
-    return tuple(found)
+    lit = cells.luminance[cells.ok]
+    dim = lit.size > 0 and np.percentile(lit, 90) < _DARK_LUMINANCE
+    tests = {
+        "clipped": proxy.clipped_fraction > _CLIPPED_SHARE,
+        "dark": dim or proxy.dark_fraction > _DARK_SHARE,
+    }
+    return tuple(flag for flag, true in tests.items() if true)
 
 
 def light_flags(
@@ -58,12 +57,17 @@ def light_flags(
     tests = {
         "few-usable-pixels": cells.ok.sum() < _FEW_CELLS or cells.ok.mean() < _FEW_SHARE,
         "readings-disagree": _widest_deg(readings) > _DISAGREE_DEG,
-        "coloured-light": sum(map(is_outside, readings.values())) >= _OUTSIDE_READINGS,
+        "coloured-light": is_coloured(readings),
         "one-coloured": colour_spread(cells) < _ONE_COLOUR,
         "two-lights": halves > TWO_LIGHTS,
         "high-doubt": doubt_deg > _HIGH_DOUBT_DEG,
     }
     return tuple(flag for flag, true in tests.items() if true)
+
+
+def is_coloured(readings: Mapping[str, Array]) -> bool:
+    """Return whether nearly all methods see a light that the vote does not even consider."""
+    return sum(map(is_outside, readings.values())) >= _OUTSIDE_READINGS
 
 
 def is_outside(light: Array) -> bool:

@@ -9,8 +9,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.cast.cells import Cells, cells_from_proxy
-from grader.cast.doubt import believed_light, doubt_deg
-from grader.cast.flags import frame_flags, light_flags
+from grader.cast.doubt import MOST_DEG, believed_light, doubt_deg
+from grader.cast.flags import frame_flags, is_coloured, light_flags
 from grader.cast.halves import halves_apart
 from grader.cast.plane import GRID
 from grader.cast.proxy import build_proxy
@@ -57,15 +57,15 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
     flags = proxy.header.flags
     if "grey" in flags:
         return Cast(proxy.header, recipe.opponent, flags=flags)
-    flags += frame_flags(proxy)
     cells = cells_from_proxy(proxy)
+    flags += frame_flags(proxy, cells)
     if np.count_nonzero(cells.ok) < _FEWEST_CELLS:
         return Cast(proxy.header, recipe.opponent, flags=(*flags, "few-usable-pixels", "nothing-measured"))
     referred = proxy.header.referred
     vote = cast_vote(cells, referred, _camera_light(proxy))
     halves = halves_apart(cells, referred)
-    doubt = doubt_deg(vote, cells, referred)
     lights = read_lights(cells)
+    doubt = MOST_DEG if is_coloured(lights) else doubt_deg(vote, cells, referred)
     return replace(
         _cast(believed_light(vote.weights @ candidate_lights(), doubt, referred), proxy, recipe),
         doubt_deg=doubt,

@@ -109,7 +109,8 @@ def _is_identity(curve: Curve) -> bool:
 def _float_limits(linear: NDArray[np.float32]) -> tuple[float, float]:
     """Return the clipping level and the noise floor of floating-point pixels.
 
-    Floats have no maximum of their own: they count as clipped where their largest value is shared by many.
+    Floats have no maximum of their own: they count as clipped where their largest value is shared by many
+    (not by nearly all: that is a flat area below white).
     """
     brightest = linear.max(axis=2)
     brightest = brightest[np.isfinite(brightest)]
@@ -117,5 +118,6 @@ def _float_limits(linear: NDArray[np.float32]) -> tuple[float, float]:
         return np.inf, 0.0
     top = float(brightest.max())
     shared = np.count_nonzero(brightest >= top * (1 - 1e-6))
-    clipped = top * (1 - 1e-6) if shared > max(2e-4 * brightest.size, 4) else np.inf
+    flat = shared > 0.9 * brightest.size and top < 1.0
+    clipped = top * (1 - 1e-6) if shared > max(2e-4 * brightest.size, 4) and not flat else np.inf
     return clipped, _DARK_RELATIVE * max(float(np.percentile(brightest, 99)), 0.0)

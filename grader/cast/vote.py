@@ -184,7 +184,7 @@ def grey_histogram(cells: Cells) -> Array:
         both = cells.pairs(axis)
         steps = (
             both * np.abs(np.diff(log_y, axis=axis)),
-            both * 3.0 * np.linalg.norm(np.diff(cells.ab, axis=axis), axis=-1),
+            both * 3.0 * np.hypot(*np.moveaxis(np.diff(cells.ab, axis=axis), -1, 0)),
             both,
         )
         for total, step in zip((change, colour, neighbours), steps, strict=True):
@@ -203,13 +203,11 @@ def edge_votes(cells: Cells) -> tuple[Array, Array]:
     -------
     places, weights : (n, 2), (n,) float64
     """
-    places, weights = [], []
-    for axis in (0, 1):
-        step = np.diff(cells.linear, axis=axis)[cells.pairs(axis)]
-        step = np.abs(step[(step > 0).all(axis=1) | (step < 0).all(axis=1)])
-        places.append(plane.ab_from_linear(step))
-        weights.append(plane.luminance(step))
-    return np.concatenate(places), np.concatenate(weights)
+    steps = np.concatenate([np.diff(cells.linear, axis=axis)[cells.pairs(axis)] for axis in (0, 1)])
+    red, green, blue = steps.T
+    agree = ((red > 0) & (green > 0) & (blue > 0)) | ((red < 0) & (green < 0) & (blue < 0))
+    steps = np.abs(steps[agree])
+    return plane.ab_from_linear(steps), plane.luminance(steps)
 
 
 def _spread(histogram: Array, blur: float) -> Array:
@@ -280,5 +278,8 @@ def angle_deg(light: Array, other: Array) -> Array:
     >>> float(angle_deg(np.array([1.0, 0, 0]), np.array([0, 2.0, 0])))
     90.0
     """
-    cosine = (light * other).sum(axis=-1) / (np.linalg.norm(light, axis=-1) * np.linalg.norm(other, axis=-1))
+    dot, own, others = (
+        np.einsum("...i,...i", *pair) for pair in ((light, other), (light, light), (other, other))
+    )
+    cosine = dot / np.sqrt(own * others)
     return np.asarray(np.degrees(np.arccos(np.clip(cosine, -1.0, 1.0))))
