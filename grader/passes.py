@@ -342,8 +342,8 @@ class Batch:
         """Refuse to begin where a file stands in the way that no earlier run of this log set out to write."""
         if self.out is None:
             return
-        names = {target.as_posix() for target in self.targets.values()}
-        for name in sorted(names):
+        names = {path: target.as_posix() for path, target in self.targets.items()}
+        for name in names.values():
             if self.options.overwrite or self._earlier.owns(name) or not os.path.lexists(self.out / name):
                 continue
             raise PresetError(

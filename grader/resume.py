@@ -90,14 +90,25 @@ class Earlier:
         """Whether an earlier run set out to write this output: what stands there may be replaced."""
         return self._log is not None and target in self._log.outputs
 
-    def superseded(self, folder: Path, targets: set[str]) -> list[str]:
-        """Return outputs of this log that are still in the folder, but that the present run would name otherwise."""
+    def superseded(self, folder: Path, targets: Mapping[str, str]) -> list[str]:
+        """Return outputs of this log that are still in the folder, but that no frame has for its own any more.
+
+        Parameters
+        ----------
+        folder : Path
+        targets : mapping
+            The present run's outputs, by source.
+        """
         if self._log is None:
             return []
-        kept = {line["output"]["file"] for line in self._log.latest() if _has_output(line)}
+        kept = {
+            by_status["graded"]["output"]["file"]
+            for file, by_status in self._log.lines.items()
+            if self.same_settings and file not in targets and _has_output(by_status.get("graded", {}))
+        }
         return sorted(
             name
-            for name in self._log.outputs - targets - kept
+            for name in self._log.outputs - set(targets.values()) - kept
             if is_below(PurePath(name)) and os.path.lexists(folder / name)
         )
 
@@ -147,7 +158,7 @@ def _same_but_for_time(one: Line, other: Line) -> bool:
 
 def _has_output(line: Line) -> bool:
     output = line.get("output")
-    return line.get("status") == "graded" and isinstance(output, dict) and isinstance(output.get("file"), str)
+    return isinstance(output, dict) and isinstance(output.get("file"), str)
 
 
 def is_below(place: PurePath) -> bool:
