@@ -10,6 +10,7 @@ import os
 import secrets
 import time
 from collections.abc import Callable, Iterable, Iterator
+from concurrent.futures import CancelledError
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -141,10 +142,7 @@ class Cluster:
         threads = 0
         with contextlib.suppress(OSError, TimeoutError, RuntimeError):
             threads = sum(self._client.nthreads().values())
-        if self._client.status != "running":
-            raise WorkerFailed(
-                f"the scheduler at {self._address} is gone", hint="start it again, then go on with --resume"
-            )
+        self._check_scheduler()
         if threads:
             self._alone_since_s = None
             return threads
@@ -157,11 +155,18 @@ class Cluster:
             )
         return 0
 
+    def _check_scheduler(self) -> None:
+        if self._client.status != "running":
+            raise WorkerFailed(
+                f"the scheduler at {self._address} is gone", hint="start it again, then go on with --resume"
+            )
+
     def _collect(self, flying: dict[Any, _Flight]) -> Iterator[Outcome[Any, Any]]:
         from distributed import wait  # noqa: PLC0415 - an extra
 
-        with contextlib.suppress(TimeoutError), self._client.as_current():
+        with contextlib.suppress(TimeoutError, CancelledError), self._client.as_current():
             wait(list(flying), timeout=_POLL_S, return_when="FIRST_COMPLETED")
+        self._check_scheduler()
         for future in [future for future in flying if future.done()]:
             yield _outcome(flying.pop(future).job, future)
 
