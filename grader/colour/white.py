@@ -27,6 +27,7 @@ _WAVELENGTHS_M: Final[Array] = _tables.CMF_FIRST_M + _tables.CMF_STEP_M * np.ara
     len(_tables.CMF), dtype=np.float64
 )
 _CMF: Final[Array] = np.array(_tables.CMF)
+_SETTLED_MIRED: Final = 1e-9
 _STEP_MIRED: Final = 0.02
 
 
@@ -176,7 +177,10 @@ def cct_duv_from_xy(xy: ArrayLike) -> tuple[float | None, float]:
         point, slope, bend = _locus(mired)
         away = target - point
         curvature = max(slope @ slope - away @ bend, 0.1 * (slope @ slope))
+        before = mired
         mired = float(np.clip(mired + (away @ slope) / curvature, first, last))
+        if abs(mired - before) < _SETTLED_MIRED:
+            break
     point, slope, _ = _locus(mired)
     duv = float(np.copysign(np.hypot(*(target - point)), (target - point) @ _green_side(slope)))
     meaningful = abs(duv) <= DUV_LIMIT and first < mired < last
