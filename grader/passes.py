@@ -106,7 +106,7 @@ class Batch:
             log = None if self.options.dry_run else self.log_path
             earlier = open_earlier(log, resume=self.options.resume, overwrite=self.options.overwrite)
             first = self._run_line()
-            self._earlier = Earlier(earlier, first)
+            self._earlier = Earlier(earlier, first, [source.path for source in self.sources])
             self._check_existing()
             self.run = Run(log, first, earlier, through_link=self.options.log is not None)
             self._make_room()
@@ -399,7 +399,7 @@ class Batch:
         )
         self.summary = self.run.summarise(order, interrupted=self.stop.asked, **shoot)
         try:
-            self.run.finish(self.summary, order)
+            self.run.finish(self.summary, order, leave_out=self._earlier.renamed)
         finally:
             if self._halted is not None:
                 done = self.summary["measured" if self.out is None else "graded"]

@@ -60,6 +60,8 @@ def before_and_after(record: Mapping[str, Any], limits: ReadLimits) -> Pictures:
 
     Both go through the same tone and encoding, so that only the cast differs.
     """
+    if record.get("status") in ("failed", "skipped"):
+        return None, None  # a file that cost a worker must not cost the report
     try:
         frame = files.read_reduced(record["file"], limits, target_px=_SIDE_PX)
         before = _jpeg(frame, np.eye(3))

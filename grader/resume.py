@@ -6,8 +6,9 @@ sources and outputs that the present run names itself.
 
 from __future__ import annotations
 
+import contextlib
 import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path, PurePath
 from typing import Any, Final
@@ -41,10 +42,15 @@ class Earlier:
         Its log; None if there is none.
     first : dict
         The present run's own run line.
+    sources : iterable of str
+        The present run's files: one that the log has under another path to the same place goes on under the
+        new one.
     """
 
-    def __init__(self, log: Log | None, first: Line) -> None:
+    def __init__(self, log: Log | None, first: Line, sources: Iterable[str] = ()) -> None:
         self._log = log
+        self.renamed = set() if log is None else _take_new_names(log, list(sources))
+        """Names in the log of files that this run calls otherwise."""
         self._first = first
         self.same_settings = log is not None and settings_of(log.run) == settings_of(first)
         self._same_version = log is not None and log.run.get("version") == first["version"]
@@ -64,6 +70,8 @@ class Earlier:
     def holds(self, line: Line) -> bool:
         """Whether the log has exactly this frame line already, but for how long it took."""
         there = self._line(line["file"], line["status"])
+        if self.renamed:
+            return False
         try:
             return there is not None and _same_but_for_time(there, line)
         except ValueError:  # figures that JSON does not have
@@ -150,6 +158,26 @@ class Earlier:
 
     def _line(self, file: str, status: str) -> Line | None:
         return None if self._log is None else self._log.lines.get(file, {}).get(status)
+
+
+def _take_new_names(log: Log, sources: list[str]) -> set[str]:
+    """Move the lines of files that are now called by another path; return the old names.
+
+    What is reused of them depends on the files' hashes, not on their names.
+    """
+    given = set(sources)
+    strangers = [file for file in log.lines if file not in given]
+    if not strangers:
+        return set()
+    now = {os.path.realpath(source): source for source in sources if source not in log.lines}
+    renamed = {}
+    for file in strangers:
+        with contextlib.suppress(OSError, ValueError):
+            if os.path.realpath(file) in now:
+                renamed[file] = now[os.path.realpath(file)]
+    for old, new in renamed.items():
+        log.lines[new] = {status: line | {"file": new} for status, line in log.lines.pop(old).items()}
+    return set(renamed)
 
 
 def _same_but_for_time(one: Line, other: Line) -> bool:

@@ -7,7 +7,7 @@ import json
 import os
 import time
 from collections import Counter
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -104,16 +104,22 @@ class Run:
             "seconds": round(time.monotonic() - self._start, 3),
         }
 
-    def finish(self, summary: Line, order: Sequence[str]) -> None:
-        """Write the summary and put the log's lines into the order of the sources, whole or not at all."""
+    def finish(
+        self, summary: Line, order: Sequence[str], *, leave_out: Collection[str] = frozenset()
+    ) -> None:
+        """Write the summary and put the log's lines into the order of the sources, whole or not at all.
+
+        Lines of the files to leave out go: names by which an earlier run called files that are called otherwise.
+        """
         if self._writer is None:
             return
         self._writer.write(summary)
         self._writer.close()
         if not summary["interrupted"] and self._writer.can_be_replaced:
-            write_atomic(
-                self._writer.path, b"".join(_ordered(read_log(self._writer.path), order)), overwrite=True
-            )
+            log = read_log(self._writer.path)
+            for file in leave_out:
+                log.lines.pop(file, None)
+            write_atomic(self._writer.path, b"".join(_ordered(log, order)), overwrite=True)
 
     def close(self) -> None:
         """Close the log as it is."""

@@ -327,3 +327,20 @@ def test_lines_of_an_old_log_are_looked_at_before_they_are_used(shoot: Path, tmp
     assert earlier.finished(file, target) is None
     by_status["graded"]["correction"] = None
     assert earlier.finished(file, target) is None
+
+
+def test_a_run_goes_on_under_another_path_to_the_same_files(
+    shoot: Path, tmp_path: Path, counted: Counted, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    out, whole = tmp_path / "out", tmp_path / "whole"
+    monkeypatch.chdir(tmp_path)
+    stop = Stop()
+    for number, _ in enumerate(grader.neutralise(["shoot"], out, options=Options(), stop=stop)):
+        if number == 3:
+            stop.ask()
+    counted.measured.clear()
+    counted.graded.clear()
+    run(shoot, out)
+    assert (counted.measured, len(counted.graded)) == ([], 5)
+    run(shoot, whole)
+    assert_same_end(out, whole)
