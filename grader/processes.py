@@ -259,13 +259,25 @@ def _serve(pipe: connection.Connection, memory_bytes: int | None) -> None:
 
 
 def _prepare(memory_bytes: int | None) -> None:
-    """Make this process a worker: it leaves with its parent, and only the parent answers signals and prints."""
+    """Make this process a worker: it leaves with its parent, and only the parent answers signals."""
     _leave_signals_to_the_parent()
     threading.Thread(target=_leave_with_the_parent, daemon=True).start()
-    with contextlib.suppress(AttributeError, OSError, ValueError):
-        os.dup2(sys.__stderr__.fileno(), 1)  # type: ignore[union-attr]  # decoders print; stdout is for data
+    _quieten_decoders()
     if memory_bytes is not None:
         _limit_memory(memory_bytes)
+
+
+def _quieten_decoders() -> None:
+    """Keep what libraries print themselves, file names as they are among it, from the terminal and from stdout.
+
+    What goes wrong with a file is in its line of the log.  Python's own stderr stays, for warnings of ours.
+    """
+    with contextlib.suppress(OSError, ValueError):
+        sys.stderr = os.fdopen(os.dup(2), "w", buffering=1, encoding="utf-8", errors="backslashreplace")
+        nowhere = os.open(os.devnull, os.O_WRONLY)
+        os.dup2(nowhere, 1)
+        os.dup2(nowhere, 2)
+        os.close(nowhere)
 
 
 def _leave_signals_to_the_parent() -> None:

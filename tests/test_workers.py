@@ -3,7 +3,10 @@
 import operator
 import os
 import signal
+import subprocess
+import sys
 import time
+from pathlib import Path
 
 import pytest
 
@@ -80,3 +83,20 @@ def test_a_cluster_that_does_not_answer_is_a_plain_error(monkeypatch: pytest.Mon
         list(workers.run(operator.neg, [1], workers.Pool(cluster="tcp://127.0.0.1:9")))
     with pytest.raises(errors.PresetError, match="local:N"):
         list(workers.run(operator.neg, [1], workers.Pool(cluster="local:none")))
+
+
+def test_what_decoders_print_reaches_neither_stdout_nor_the_terminal(tmp_path) -> None:
+    # LibRaw prints a damaged file's name, whatever is in it; libpng and others print too.
+    code = (
+        "import os, sys, warnings\n"
+        "from grader import workers\n"
+        "from faults.faultkit import talk\n"
+        "if __name__ == '__main__':\n"
+        "    print([o.result for o in workers.run(talk, [1], workers.Pool(processes=1))])"
+    )
+    path = os.pathsep.join([str(Path(__file__).parent), *sys.path])
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, env=os.environ | {"PYTHONPATH": path}, check=True
+    )
+    assert done.stdout == b"[1]\n"
+    assert done.stderr == b"a warning of ours\n"

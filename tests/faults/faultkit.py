@@ -6,6 +6,7 @@ import hashlib
 import json
 import os
 import signal
+import sys
 import time
 from pathlib import Path
 
@@ -89,4 +90,12 @@ def misbehave(stem: str) -> None:
 def nap(job: int) -> int:
     """Return the job, a little later."""
     time.sleep(0.03)
+    return job
+
+
+def talk(job: int) -> int:
+    """Print as libraries do, past Python; and as Python does, to stderr."""
+    os.write(1, b"hello stdout\n")
+    os.write(2, b"\x1b[2J: Unexpected end of file\n")
+    print("a warning of ours", file=sys.stderr)
     return job
