@@ -47,19 +47,25 @@ def by_turns(
     *,
     rounds: int = 7,
     seconds: float = 0,
+    before: Callable[[], object] | None = None,
 ) -> dict[str, float]:
     """Return the best time of each function in seconds; a first, untimed round warms up.
+
+    ``before`` is called, untimed, before each.
 
     At least ``rounds`` rounds, and at least ``seconds`` in all: a busy machine needs more of them.
     """
     best = dict.fromkeys(functions, float("inf"))
+    prepare = before or (lambda: None)
     for function in functions.values():
+        prepare()
         function()
     clock = time.process_time if cpu else time.perf_counter
     end = time.perf_counter() + seconds
     done = 0
     while done < rounds or time.perf_counter() < end:
         for name, function in functions.items():
+            prepare()
             start = clock()
             function()
             best[name] = min(best[name], clock() - start)

@@ -100,7 +100,7 @@ def grade_file(job: GradeJob) -> Graded:
         )
         correction = own_correction(cast, job.settings)
     output = job.settings.output
-    graded, counts = pixels.correct(frame, correction, output)
+    graded, counts = pixels.correct(frame, correction, output, overwrite=True)
     del frame
     _enter(job, target)
     written = files.write(graded, target, output, correction=correction, overwrite=job.overwrite)

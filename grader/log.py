@@ -147,7 +147,7 @@ def graded_line(
             "clipped_fraction": counts.clipped_fraction,
             "out_of_gamut_fraction": counts.out_of_gamut_fraction,
         },
-        "notes": [*planned.get("notes", []), *written.notes],
+        "notes": [*planned.get("notes", []), *counts.notes, *written.notes],
         "seconds": seconds,
     }
     return line

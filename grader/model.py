@@ -341,6 +341,8 @@ class Counts:
 
     clipped_fraction: float = 0.0
     out_of_gamut_fraction: float = 0.0
+    notes: tuple[str, ...] = ()
+    """Automatic choices made on the way, in plain words, for the log."""
 
 
 @dataclass(frozen=True, slots=True)

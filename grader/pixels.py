@@ -23,6 +23,8 @@ from grader.model import Correction, Counts, Frame, Output
 _BAND_PIXELS: Final = 64 * _pixels_kernel.CHUNK
 """Pixels that a thread takes at a time; whole chunks, so that threads change no result."""
 
+_CLIPPED_FLOATS: Final = "no value is above 1.0: what is at 1.0 was taken as clipped, and kept white"
+
 
 def correct(
     frame: Frame,
@@ -56,7 +58,8 @@ def correct(
     frame : Frame
         Header, metadata, alpha and encoding are those of the source.
     counts : Counts
-        Fractions of the frame's pixels; zero for floating-point frames, which are not clipped.
+        Fractions of the frame's pixels; zero for floating-point frames, which are not clipped.  A note tells when
+        such a frame was taken as clipped by whoever made it.
 
     Raises
     ------
@@ -86,7 +89,8 @@ def correct(
             pixels, result, prepared.steps, curves, toned=toned(frame, output)
         )
     total = max(pixels.size // 3, 1)
-    return replace(frame, pixels=result, space=target), Counts(clipped / total, outside / total)
+    notes = (_CLIPPED_FLOATS,) if not prepared.steps.bounded and prepared.steps.clip[0] < 1 else ()
+    return replace(frame, pixels=result, space=target), Counts(clipped / total, outside / total, notes)
 
 
 def correct_frame(frame: Frame, correction: Correction, output: Output | None = None) -> Frame:

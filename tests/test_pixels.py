@@ -334,11 +334,13 @@ def test_floats_keep_values_below_black_and_above_white():
 def test_a_float_frame_clipped_at_white_stays_white_there():
     values = np.full((1, 600, 3), 0.4, np.float32)
     values[0, :300] = 1
-    graded, _ = pixels.correct(frame_from_array(values), tungsten())
+    graded, counts = pixels.correct(frame_from_array(values), tungsten())
     assert np.ptp(graded.pixels[0, :300]) < 1e-6
+    assert "clipped" in counts.notes[0]
     values[0, 599] = 1.5  # now 1 is nothing special
-    graded, _ = pixels.correct(frame_from_array(values), tungsten())
+    graded, counts = pixels.correct(frame_from_array(values), tungsten())
     assert graded.pixels[0, 0, 2] > 1.5
+    assert counts.notes == ()
 
 
 def test_missing_numbers_stay_where_they_are():
