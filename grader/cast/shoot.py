@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from grader.cast import plane, shoot_course, shoot_order, vote
 from grader.cast.correction import correction_for, fixed_correction
+from grader.cast.doubt import believed_light
 from grader.cast.pins import apply_pins
 from grader.cast.shoot_course import Maps
 from grader.cast.shoot_lights import Match, Stretch, find_lights, find_matches
@@ -206,7 +207,8 @@ def _correct(shoot: _Shoot, at: int, pooled: Array | None) -> Correction:
         fixed = fixed_correction(settings, cast.header)
         return replace(fixed, stretch=name, reason=f"fixed by the preset of stretch {name}")
     recipe = shoot.recipe if settings is None else settings
-    if at in shoot.known or pooled is None:
+    left = "coloured-light" in cast.flags and recipe.coloured_light == "leave" and not stretch.pinned
+    if at in shoot.known or pooled is None or left:
         return replace(_alone(cast, recipe, shoot.known.get(at)), stretch=name)
     if len(stretch.rows) == 1 and cast.white_xy is not None and not (stretch.pinned or stretch.unbiased):
         return replace(_alone(cast, recipe, None, "alone in its stretch"), stretch=name)
@@ -223,7 +225,7 @@ def _pooled(shoot: _Shoot, at: int, stretch: Stretch, place: Array, recipe: Reci
         reason, flags = f"nothing measured in this frame; {reason}", ("light-of-stretch",)
     else:
         own = plane.ab_from_xy(np.array(cast.white_xy))
-        odd = oddness(shoot.maps[at], vote.log_prior(stretch.referred), own, place, frozenset(cast.flags))
+        odd = oddness(shoot.maps[at], vote.log_prior(stretch.referred), cast, place)
         flags = ("odd-frame",) if odd.odd else ()
         if odd.pull > 0.0:
             place = (1.0 - odd.pull) * place + odd.pull * own
@@ -231,7 +233,10 @@ def _pooled(shoot: _Shoot, at: int, stretch: Stretch, place: Array, recipe: Reci
             reason = f"pulled {odd.pull:.0%} toward its own vote, {odd.degrees:.1f} degrees from the {reason}"
         elif odd.odd:
             reason = f"{reason}; its own vote, {odd.degrees:.1f} degrees away, is not trusted"
-    x, y = xy_from_linear(plane.linear_from_ab(place))
+    light = plane.linear_from_ab(place)
+    if not stretch.pinned and doubt_deg > 0.0:
+        light = believed_light(light, doubt_deg, stretch.referred)
+    x, y = xy_from_linear(light)
     return correction_for(
         (float(x), float(y)),
         cast.header,
