@@ -8,17 +8,22 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from grader.cast import shoot_course, vote
+from grader.cast import plane, shoot_course, vote
+from grader.model import Cast
 
 Array = NDArray[np.float64]
 
-_ODD_SHARE: Final = 0.02
-"""Share of frames under another light than their neighbours. (judgement)"""
+_ODD_SHARE: Final = 0.007
+"""Share of frames that stand under another light than their neighbours and show it. (tuned on simulated shoots: a
+frame that is followed wrongly is worse than an odd one that is not)"""
 _STRETCH_SPREAD: Final = np.array([0.010, 0.020])
-"""How far the best candidate of a frame lies from the light of its stretch along a and b although the light is
-the same. (tuned on simulated shoots)"""
+"""How far the best candidate of a frame lies from the light of its stretch, along a and b, although the light
+is the same. (tuned on simulated shoots)"""
 _LEAST_DEG: Final = 3.0
-"""A frame whose own light is nearer than this to that of its stretch is not odd: its own doubt is as large. (judgement)"""
+"""A frame whose own light is nearer than this to that of its stretch is not odd: its own doubt is as large.
+(judgement)"""
+_MOST_DOUBT_DEG: Final = 4.0
+"""A frame with more doubt about its own light is not followed. (tuned on simulated shoots)"""
 _CONTENT_FLAGS: Final = frozenset({"one-coloured", "coloured-light", "few-usable-pixels", "dark", "clipped"})
 """What makes a frame's own light worth little."""
 
@@ -41,23 +46,22 @@ class Oddness:
         return self.probability >= 0.5 and self.degrees >= _LEAST_DEG
 
 
-def oddness(
-    log_map: NDArray[np.float32], log_prior: Array, own: Array, stretch: Array, flags: frozenset[str]
-) -> Oddness:
+def oddness(log_map: NDArray[np.float32], log_prior: Array, cast: Cast, stretch: Array) -> Oddness:
     """Weigh a frame's own vote against the light of its stretch.
 
     The frame's evidence under the light of its stretch stands against its evidence under any light.  Frames
-    that show little besides one colour can disagree without another light: they are flagged, not followed.
+    that show little besides one colour, or are unsure themselves, can disagree without another light: they
+    are flagged, not followed.
 
     Parameters
     ----------
     log_map : (C,) float32
         From `shoot_course.log_robust`.
     log_prior : (C,) float64
-    own, stretch : (2,) float64
-        The two lights in the plane.
-    flags : frozenset of str
-        Of the frame's cast.
+    cast : Cast
+        Of the frame, measured.
+    stretch : (2,) float64
+        The light of the stretch in the plane.
 
     Returns
     -------
@@ -69,8 +73,9 @@ def oddness(
     under_stretch = (1.0 - _ODD_SHARE) * float(near @ evidence)
     under_another = _ODD_SHARE * float(vote.weights_from_log(log_prior) @ evidence)
     probability = under_another / max(under_another + under_stretch, 1e-12)
-    degrees = float(shoot_course.degrees_apart(own, stretch))
-    followed = degrees >= _LEAST_DEG and not flags & _CONTENT_FLAGS
+    degrees = float(shoot_course.degrees_apart(plane.ab_from_xy(np.array(cast.white_xy)), stretch))
+    sure = cast.doubt_deg is None or cast.doubt_deg <= _MOST_DOUBT_DEG
+    followed = degrees >= _LEAST_DEG and sure and _CONTENT_FLAGS.isdisjoint(cast.flags)
     return Oddness(probability, degrees, _ramp(probability) if followed else 0.0)
 
 

@@ -16,10 +16,10 @@ Array = NDArray[np.float64]
 
 WORTH: Final = 6.0
 """Most independent frames that a stretch is worth against the prior. (tuned on simulated shoots)"""
-_TRUST: Final = 0.5
-_WITNESS_REACH: Final = 5
+_TRUST: Final = 0.7
+_WITNESS_REACH: Final = 4
 _WITNESS_PROBABILITY: Final = 0.5
-"""A switch must also show, roughly there, when each frame's evidence is trusted half: neighbours show the same
+"""A switch must also show, roughly there, when each frame's evidence is trusted less: neighbours show the same
 things and err together. (tuned on simulated shoots)"""
 _WANDER: Final = 0.002
 """Random step of the light from frame to frame while switches are sought. (tuned on simulated shoots)"""
