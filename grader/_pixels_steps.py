@@ -14,12 +14,12 @@ from grader.model import Correction, Frame, Matrix, Output, Space
 CLIP_RAMP: Final = (0.75, 0.96)
 """Linear light, as a share of the file's white, over which a channel counts more and more as clipped: blown areas of
 JPEGs ripple down to about the upper one (common practice), and shoulders of cameras' curves begin near the lower."""
-COLOUR_RAMP: Final = (0.10, 0.35)
+COLOUR_RAMP: Final = (0.05, 0.25)
 """Smallest over largest channel after the correction, clipped channels counted as large as the largest: below, a
 clipped pixel is a coloured lamp; above, it may have been white."""
 ONE_CLIPPED_RAMP: Final = (0.50, 0.85)
 """The same ratio after correction, over which a pixel with one clipped channel turns into white."""
-TWO_CLIPPED_RAMP: Final = (0.10, 0.70)
+TWO_CLIPPED_RAMP: Final = (0.05, 0.50)
 """And with two clipped channels, which tell less of a colour."""
 STRENGTH_RAMP: Final = (0.0, 0.15)
 """How far the correction moves white (1 - smallest over largest channel) for the greying to be whole."""
