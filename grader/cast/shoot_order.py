@@ -23,7 +23,7 @@ BREAK_S: Final = 7200.0
 """Frames farther apart than this never share a stretch, so that nothing here depends on them. (judgement)"""
 _SWITCH_ODDS: Final = 0.01
 """A light lasts for about a hundred frames. (judgement; half or twice of it changes little)"""
-_PAUSE_S: Final = 1800.0
+_PAUSE_S: Final = 900.0
 """A pause of this length is as good a reason for another light as a move to another room. (judgement)"""
 _EXPOSURE_STOPS: Final = 2.0
 """A step of the camera settings that changing subjects under one light seldom ask for. (common practice)"""
