@@ -249,13 +249,11 @@ def _prepared() -> Iterator[None]:
 def _serve(pipe: connection.Connection, memory_bytes: int | None) -> None:
     """Do jobs until the pipe ends."""
     _prepare(memory_bytes)
-    while True:
-        try:
+    with contextlib.suppress(EOFError, OSError):
+        while True:
             function, job = pipe.recv()
-        except (EOFError, OSError):
-            return
-        pipe.send(None)  # begun
-        pipe.send((guarded(function, job),))
+            pipe.send(None)  # begun
+            pipe.send((guarded(function, job),))
 
 
 def _prepare(memory_bytes: int | None) -> None:
