@@ -22,6 +22,7 @@ from grader.colour.fitted import RATIONAL, TABLE, Form
 
 CHUNK: Final = 512
 _PLANES: Final = 10
+_BLOCK: Final = 128
 _PLANE: Final = CHUNK + 16  # planes a power of two apart would compete for the same cache lines
 
 _f = np.float32
@@ -47,19 +48,29 @@ def grade(source: Any, target: Any, decode: Form, steps: Steps, encode: Form) ->
     for start in range(0, source.size, 3 * CHUNK):
         count = min(3 * CHUNK, source.size - start) // 3
         _load(source[start : start + 3 * count], planes, count, decode, steps)
-        touched, beyond = _multiply(planes, count, steps.matrix, steps.clip[0])
-        if touched > _ZERO:
-            _clipping(planes, count, steps)
-            _lift(planes, count, steps)
-            _make_grey(planes, count, steps)
-            beyond = _beyond(planes, count)
-        if steps.bounded and beyond > _ZERO:
-            _pull_from_black(planes, count, steps.luminance)
-            _pull_from_white(planes, count, steps.luminance)
-            outside += int(_sum(planes[6 * _PLANE : 6 * _PLANE + count]))
-            clipped += int(_sum(planes[7 * _PLANE : 7 * _PLANE + count]))
+        if _multiply(planes, count, steps.matrix, steps.clip[0]) > _ZERO:
+            for block in range(0, count, _BLOCK):
+                more_outside, more_clipped = _mend(planes[block:], min(_BLOCK, count - block), steps)
+                outside += more_outside
+                clipped += more_clipped
         _store(planes[3 * _PLANE :], count, encode, steps, target[start : start + 3 * count])
     return outside, clipped
+
+
+@_exact
+def _mend(planes: Any, count: int, steps: Steps) -> tuple[int, int]:
+    """Keep highlights and pull into the gamut where a block of pixels needs it; return what `grade` does."""
+    if _excess(planes, count, steps.clip[0]) > _ZERO:
+        _clipping(planes, count, steps)
+        _lift(planes, count, steps)
+        _make_grey(planes, count, steps)
+    if steps.bounded and _beyond(planes, count) > _ZERO:
+        _pull_from_black(planes, count, steps.luminance)
+        _pull_from_white(planes, count, steps.luminance)
+        return int(_sum(planes[6 * _PLANE : 6 * _PLANE + count])), int(
+            _sum(planes[7 * _PLANE : 7 * _PLANE + count])
+        )
+    return 0, 0
 
 
 @_exact
@@ -165,13 +176,13 @@ def _through_table(plane: Any, table: Any, form: Form) -> None:
 
 
 @_summing
-def _multiply(planes: Any, count: int, matrix: Any, limit: Any) -> tuple[Any, Any]:
-    """Apply the matrix; return the sums of what the file has above a limit, and of what came out below 0 or above 1.
+def _multiply(planes: Any, count: int, matrix: Any, limit: Any) -> Any:
+    """Apply the matrix; return the sum of what the file has above a limit, and what came out below 0 or above 1.
 
-    The sums are 0 if there is no such thing; a sum becomes vector code, a maximum does not.
+    It is 0 if there is no such thing.  (A sum becomes vector code, a maximum does not.)
     """
     m00, m01, m02, m10, m11, m12, m20, m21, m22 = matrix
-    touched = beyond = _ZERO
+    found = _ZERO
     for i in range(count):
         x, y, z = planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]
         red = m00 * x + m01 * y + m02 * z
@@ -180,9 +191,17 @@ def _multiply(planes: Any, count: int, matrix: Any, limit: Any) -> tuple[Any, An
         planes[3 * _PLANE + i] = red
         planes[4 * _PLANE + i] = green
         planes[5 * _PLANE + i] = blue
-        touched += max(max(x, y, z) - limit, _ZERO)
-        beyond += max(-min(red, green, blue), _ZERO) + max(max(red, green, blue) - _ONE, _ZERO)
-    return touched, beyond
+        found += max(max(x, y, z) - limit, max(red, green, blue) - _ONE, -min(red, green, blue), _ZERO)
+    return found
+
+
+@_summing
+def _excess(planes: Any, count: int, limit: Any) -> Any:
+    """Return the sum of what the file has above a limit."""
+    found = _ZERO
+    for i in range(count):
+        found += max(max(planes[i], planes[_PLANE + i], planes[2 * _PLANE + i]) - limit, _ZERO)
+    return found
 
 
 @_fast
