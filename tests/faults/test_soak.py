@@ -11,7 +11,7 @@ from pathlib import Path
 
 import pytest
 
-FRAMES = int(os.environ.get("GRADER_SOAK_FRAMES", "300"))
+FRAMES = int(os.environ.get("GRADER_SOAK_FRAMES", "240"))
 WORKER_PER_FRAME, PARENT_PER_FRAME, NOISE = 4_000, 20_000, 2_000_000
 """A leaked frame of this test takes 6,720 bytes as pixels and 26,880 as linear light; the parent keeps a record
 of each frame for the summary and the report.  [bytes]"""
