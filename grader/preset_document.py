@@ -70,7 +70,7 @@ def _toward_cct(cct_k: float) -> str:
 
 
 def _toward_xy(parts: Sequence[Any]) -> str:
-    if len(parts) != 2 or any(isinstance(p, (bool, str)) for p in parts):
+    if len(parts) != 2 or any(isinstance(p, bool) or not isinstance(p, (int, float)) for p in parts):
         raise ValueError(_TOWARD_WORDS)
     x, y = _check_xy((float(parts[0]), float(parts[1])))
     return f"{x!r},{y!r}"
