@@ -108,8 +108,8 @@ class Batch:
             first = self._run_line()
             self._earlier = Earlier(earlier, first, [source.path for source in self.sources])
             self._check_existing()
-            self.run = Run(log, first, earlier, through_link=self.options.log is not None)
             self._make_room()
+            self.run = Run(log, first, earlier, through_link=self.options.log is not None)
         except BaseException:
             self._release()
             raise
@@ -399,7 +399,7 @@ class Batch:
         )
         self.summary = self.run.summarise(order, interrupted=self.stop.asked, **shoot)
         try:
-            self.run.finish(self.summary, order, leave_out=self._earlier.renamed)
+            self.run.finish(self.summary, order, leave_out=self._earlier.left_out)
         finally:
             if self._halted is not None:
                 done = self.summary["measured" if self.out is None else "graded"]

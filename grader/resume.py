@@ -19,6 +19,7 @@ from grader.log_file import Line, Log, encode_line, settings_of
 from grader.model import Cast, Correction, Counts, Opponent, Written
 
 _MOST_TRIES: Final = 2
+_STATUSES: Final = ("measured", "planned", "graded", "failed", "skipped")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -49,8 +50,8 @@ class Earlier:
 
     def __init__(self, log: Log | None, first: Line, sources: Iterable[str] = ()) -> None:
         self._log = log
-        self.renamed = set() if log is None else _take_new_names(log, list(sources))
-        """Names in the log of files that this run calls otherwise."""
+        self.left_out = set() if log is None else _take_new_names(log, list(sources))
+        """Names in the log that are to go from it: of files that this run calls otherwise, and of no files."""
         self._first = first
         self.same_settings = log is not None and settings_of(log.run) == settings_of(first)
         self._same_version = log is not None and log.run.get("version") == first["version"]
@@ -70,7 +71,7 @@ class Earlier:
     def holds(self, line: Line) -> bool:
         """Whether the log has exactly this frame line already, but for how long it took."""
         there = self._line(line["file"], line["status"])
-        if self.renamed:
+        if self.left_out:
             return False
         try:
             return there is not None and _same_but_for_time(there, line)
@@ -147,13 +148,20 @@ class Earlier:
     def others(self, files: set[str]) -> Iterator[tuple[str, Line | None]]:
         """Yield the files of the log that are not among ``files``, each with the line that stands for it.
 
-        The line is None where the file is gone before it was graded, or its line cannot be used.
+        The line is None where the file is gone before it was graded, or its line cannot be used.  What failed and
+        is no file (any more), a folder that was not there for example, is left out of the log from now on.
         """
         if self._log is None:
             return
-        for file, line in zip(self._log.lines, self._log.latest(), strict=True):
-            if file not in files:
-                stands = _is_plain(line) and (line["status"] == "graded" or os.path.lexists(file))
+        for file, by_status in self._log.lines.items():
+            if file in files:
+                continue
+            status, line = next(reversed(by_status.items()))
+            there = os.path.isfile(file)  # noqa: PTH113 - names may hold bytes that are no UTF-8
+            if status in ("failed", "skipped") and not there:
+                self.left_out.add(file)
+            else:
+                stands = _is_plain(line) and (status == "graded" or there)
                 yield file, line if stands else None
 
     def _line(self, file: str, status: str) -> Line | None:
@@ -199,7 +207,8 @@ def _is_plain(line: Line) -> bool:
     figures = [line.get("cast"), line.get("residual")]
     flags = line.get("flags") or []
     return (
-        all(one is None or (isinstance(one, dict) and _are_figures(one)) for one in figures)
+        line.get("status") in _STATUSES
+        and all(one is None or (isinstance(one, dict) and _are_figures(one)) for one in figures)
         and isinstance(flags, list)
         and all(isinstance(flag, str) for flag in flags)
     )

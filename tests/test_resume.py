@@ -344,3 +344,18 @@ def test_a_run_goes_on_under_another_path_to_the_same_files(
     assert (counted.measured, len(counted.graded)) == ([], 5)
     run(shoot, whole)
     assert_same_end(out, whole)
+
+
+def test_a_folder_that_was_not_there_is_forgotten_once_it_is(shoot: Path, tmp_path: Path) -> None:
+    out, whole = tmp_path / "out", tmp_path / "whole"
+    stop = Stop()
+    for number, _ in enumerate(grader.neutralise([shoot], out, options=Options(), stop=stop)):
+        if number == 3:
+            stop.ask()
+    shoot.rename(tmp_path / "unplugged")
+    statuses = [line["status"] for line in run(shoot, out)]
+    assert sorted(statuses) == ["failed", *["skipped"] * 5]
+    (tmp_path / "unplugged").rename(shoot)
+    assert [line["status"] for line in run(shoot, out)] == ["graded"] * 9
+    run(shoot, whole)
+    assert_same_end(out, whole)

@@ -173,6 +173,25 @@ def test_a_log_of_any_nonsense_is_measured_anew_or_refused_never_believed(
         assert comparable(out)[1:-1] == comparable(tmp_path / "good")[1:-1]
 
 
+def test_lines_of_no_kind_and_no_status_are_passed_over(shoot: Path, tmp_path: Path) -> None:
+    out = tmp_path / "out"
+    run(shoot, out)
+    odd: list[dict] = [
+        {"kind": "frame", "file": "x"},
+        {"kind": "frame", "file": "y", "status": ["graded"]},
+        {"kind": "frame", "file": "z", "status": "graded", "flags": [{}], "cast": {"delta_e_2000": "warm"}},
+        {"kind": "frame", "file": "a\0b", "status": "planned"},
+        {"kind": "frame"},
+        {"kind": "target", "file": "x", "output": "y"},
+        {"kind": {}},
+        {},
+    ]
+    with (out / LOG_NAME).open("ab") as log:
+        log.write(b"".join(map(encode_line, odd)))
+    assert sum(line["status"] == "graded" for line in run(shoot, out)) == 4
+    list(grader.check(out))
+
+
 def test_a_log_nested_without_end_is_refused(shoot: Path, tmp_path: Path) -> None:
     out = tmp_path / "out"
     run(shoot, out)
