@@ -22,7 +22,7 @@ with warnings.catch_warnings():
 NM = np.arange(400.0, 701.0, 5.0)
 SHAPE = colour.SpectralShape(400, 700, 5)
 HEIGHT, WIDTH = 64, 96
-NATURAL = ("dark skin", "dark skin", "light skin", "light skin", "foliage", "foliage", "foliage", "blue sky")
+NATURAL = ("dark skin", "light skin", "orange yellow", "foliage", "foliage", "foliage", "blue sky")
 
 
 @functools.cache
@@ -100,7 +100,7 @@ def sensors():
 class Scenes:
     """An endless walk past things: each call gives the reflectances of one frame's leaves and their layout."""
 
-    def __init__(self, random: np.random.Generator, situation_frames: float = 2.0):
+    def __init__(self, random: np.random.Generator, situation_frames: float = 1.5):
         self.random, self.stay = random, 1.0 - 1.0 / situation_frames
         self.palette = self._new_palette()
 
@@ -119,16 +119,16 @@ class Scenes:
         return (picture + noise).astype(np.float32)
 
     def _new_palette(self):
-        """Return 5 to 14 reflectances: half near grey, a third natural colours, the rest anything."""
-        kinds = self.random.choice(3, self.random.integers(5, 15), p=[0.5, 0.4, 0.1])
+        """Return 8 to 20 reflectances: half near grey, a third natural colours, the rest anything."""
+        kinds = self.random.choice(3, self.random.integers(8, 21), p=[0.53, 0.4, 0.07])
         return np.stack([self._reflectance(kind) for kind in kinds])
 
     def _reflectance(self, kind):
         names, reflectances = chart()
         level = self.random.uniform(0.05, 0.6)
-        if kind == 0:  # paint, stone, cloth: a smooth tilt of a few percent
+        if kind == 0:  # paint, stone, cloth, wood: a smooth tilt, toward warm on average
             phase = np.outer([1.0, 2.0], (NM - 550.0) / 150.0 * np.pi / 2.0)
-            return level * (1.0 + self.random.normal(0.0, 0.06, 2) @ np.sin(phase))
+            return level * (1.0 + self.random.normal([0.08, -0.03], [0.05, 0.02]) @ np.sin(phase))
         which = names.index(str(self.random.choice(NATURAL))) if kind == 1 else self.random.integers(18)
         strength = (0.75 if kind == 1 else 1.0) * self.random.uniform(0.5, 1.0)
         return level * (1.0 - strength + strength * reflectances[which] / reflectances[which].mean())
@@ -137,7 +137,7 @@ class Scenes:
         """Return the number of the leaf that each cell shows; later leaves lie on top."""
         rows, columns = np.mgrid[:HEIGHT, :WIDTH]
         leaves = np.zeros((HEIGHT, WIDTH), np.intp)
-        count = int(self.random.integers(30, 110))
+        count = int(self.random.integers(40, 140))
         for number in range(1, count):
             y, x = self.random.uniform(0, HEIGHT), self.random.uniform(0, WIDTH)
             size = 2.5 / self.random.power(1.5) ** 1.0

@@ -14,24 +14,26 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from grader.cast import shoot_course, vote
+from grader.cast import shoot_course
 from grader.cast.shoot_course import Maps
+from grader.cast.stretches import WORTH
 
 Array = NDArray[np.float64]
 
-_SPREAD: Final = np.array([0.010, 0.014])
+_SPREAD: Final[Array] = np.array([0.010, 0.014])
 """Standard deviation of the step between bodies along a and b, before the frames are looked at: about the
 largest that is known of camera matrices, 0.014 in b. (judgement)"""
-_WORTH: Final = 6.0
-"""Most independent frames that one body's share of a stretch is worth. (tuned on simulated shoots)"""
+_PER_LIGHT: Final[Array] = np.array([0.003, 0.006])
+"""How much the step differs from lamp to lamp, since two sensors do not see all spectra alike. (simulated shoots)"""
+_PER_FRAME: Final[Array] = np.array([0.010, 0.020])
+"""What one frame adds to the error of a pooled light, falling with the root of their number. (simulated shoots)"""
 _APART: Final = 0.1
 """Probability that two bodies at work at the same time stand under different lights. (judgement)"""
+_APART_DENSITY: Final = 50.0
+"""Density of the difference of two unrelated lights: even over 0.1 along a and 0.2 along b. (judgement)"""
 _FEWEST: Final = 3
 """Frames that each body must have in a shared stretch."""
-_STEPS: Final[Array] = np.stack(
-    np.meshgrid(np.linspace(-0.035, 0.035, 15), np.linspace(-0.05, 0.05, 21), indexing="ij"), axis=-1
-).reshape(-1, 2)
-"""Steps that are tried, half a bin apart."""
+_ROUNDS: Final = 12
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -73,8 +75,8 @@ def overlaps(first: Sequence[Span], second: Sequence[Span]) -> list[tuple[int, i
 def measure_step(log_maps: Maps, log_prior: Array, pairs: Sequence[tuple[Span, Span]]) -> Step | None:
     """Return the step between two bodies from pairs of spans that overlap in time.
 
-    Each pair tells how likely every step is; pairs under different lights (another room) are told apart
-    by their disagreement.
+    Each pair gives a difference of two pooled lights, surer the more frames it has; pairs under different
+    lights (another room) are told apart by their disagreement (expectation and maximisation [1]_).
 
     Parameters
     ----------
@@ -88,19 +90,43 @@ def measure_step(log_maps: Maps, log_prior: Array, pairs: Sequence[tuple[Span, S
     -------
     Step or None
         None without a pair.
+
+    References
+    ----------
+    .. [1] A. P. Dempster, N. M. Laird, D. B. Rubin, "Maximum likelihood from incomplete data via the EM
+       algorithm", JRSS B 39(1), 1977, doi:10.1111/j.2517-6161.1977.tb01600.x.
     """
     if not pairs:
         return None
-    told = np.stack([_told_by(log_maps, log_prior, *_common(*pair)) for pair in pairs])
-    even = 1.0 / len(_STEPS)
-    log_weights = np.log((1.0 - _APART) * told + _APART * even).sum(axis=0)
-    log_weights -= 0.5 * ((_STEPS / _SPREAD) ** 2).sum(axis=1)
-    weights = vote.weights_from_log(log_weights)
-    mean = weights @ _STEPS
-    off = _STEPS - mean
-    likely = told @ weights
-    shared = (1.0 - _APART) * likely / ((1.0 - _APART) * likely + _APART * even)
-    return Step(mean, (off * weights[:, None]).T @ off, shared)
+    common = [_common(*pair) for pair in pairs]
+    differences = np.array([_difference(log_maps, log_prior, *rows) for rows in common])
+    frames = np.array([[1.0 / len(one) + 1.0 / len(other)] for one, other in common])
+    variance = _PER_LIGHT**2 + _PER_FRAME**2 * frames
+    ab = np.median(differences, axis=0)
+    for _ in range(_ROUNDS):
+        shared = _probably_shared(differences - ab, variance)
+        weights = shared[:, None] / variance
+        precision = weights.sum(axis=0) + _SPREAD**-2.0
+        ab = (weights * differences).sum(axis=0) / precision
+    scatter = (weights * (differences - ab) ** 2).sum(axis=0) / max(float(shared.sum()) - 1.0, 1.0)
+    return Step(ab, np.diag(np.maximum(scatter, 1.0) / precision), shared)
+
+
+def _probably_shared(off: Array, variance: Array) -> Array:
+    """Return the probability that each pair is under one light, by how far it is off the common step."""
+    density = np.exp(-0.5 * (off**2 / variance).sum(axis=1)) / (2.0 * np.pi * np.sqrt(variance.prod(axis=1)))
+    return np.asarray((1.0 - _APART) * density / ((1.0 - _APART) * density + _APART * _APART_DENSITY))
+
+
+def _difference(log_maps: Maps, log_prior: Array, one: NDArray[np.intp], other: NDArray[np.intp]) -> Array:
+    """Return how far the pooled light of the second group of frames lies from that of the first."""
+    first, second = (
+        shoot_course.place_of(
+            shoot_course.pooled(log_maps[rows].sum(axis=0, dtype=np.float64), log_prior, len(rows), WORTH)
+        )
+        for rows in (one, other)
+    )
+    return second - first
 
 
 def _common(one: Span, other: Span) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
@@ -112,12 +138,3 @@ def _common(one: Span, other: Span) -> tuple[NDArray[np.intp], NDArray[np.intp]]
 
 def _between(span: Span, first: float, last: float) -> NDArray[np.intp]:
     return span.rows[(span.times_s >= first) & (span.times_s <= last)]
-
-
-def _told_by(log_maps: Maps, log_prior: Array, one: NDArray[np.intp], other: NDArray[np.intp]) -> Array:
-    """Return how likely each step is if both groups of frames are under one light, sum 1."""
-    first, second = (
-        log_maps[rows].sum(axis=0, dtype=np.float64) * min(1.0, _WORTH / len(rows)) for rows in (one, other)
-    )
-    moved = shoot_course.shifted(np.repeat(second[None].astype(np.float32), len(_STEPS), axis=0), _STEPS)
-    return vote.weights_from_log(shoot_course.log_total(first + moved + log_prior))

@@ -16,12 +16,15 @@ Array = NDArray[np.float64]
 
 WORTH: Final = 6.0
 """Most independent frames that a stretch is worth against the prior. (tuned on simulated shoots)"""
-_TRUST: Final = 0.7
+_FLATTEN: Final = 0.5
+"""Power of the prior that a new light is drawn from: after a switch, lamps are likelier than in all photographs.
+(tuned on simulated shoots)"""
+_TRUST: Final = 0.6
 _WITNESS_REACH: Final = 4
 _WITNESS_PROBABILITY: Final = 0.5
 """A switch must also show, roughly there, when each frame's evidence is trusted less: neighbours show the same
 things and err together. (tuned on simulated shoots)"""
-_WANDER: Final = 0.002
+_WANDER: Final = 0.001
 """Random step of the light from frame to frame while switches are sought. (tuned on simulated shoots)"""
 _SWITCH_PROBABILITY: Final = 0.5
 _SURE_PROBABILITY: Final = 0.6
@@ -79,8 +82,9 @@ def find_switches(log_maps: Maps, log_prior: Array, odds: Array) -> list[int]:
     list of int
         Ascending; never 0.
     """
-    course = shoot_course.follow(log_maps, log_prior, odds, _WANDER)
-    doubtful = shoot_course.follow(log_maps * np.float32(_TRUST), log_prior, odds, _WANDER)
+    anew = _FLATTEN * log_prior
+    course = shoot_course.follow(log_maps, anew, odds, _WANDER)
+    doubtful = shoot_course.follow(log_maps * np.float32(_TRUST), anew, odds, _WANDER)
     witnessed = np.convolve(doubtful.jumps, np.ones(2 * _WITNESS_REACH + 1), "full")[_WITNESS_REACH:]
     switches = [at for at in _declared(course.jumps) if witnessed[at] >= _WITNESS_PROBABILITY]
     while True:
