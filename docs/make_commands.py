@@ -14,7 +14,7 @@ ever asks a question. Options can be given as environment variables too, as clic
 (`GRADER_NEUTRALISE_WORKERS=2`).
 
 Exit codes: 0 all done; 1 a fault of grader's own; 2 usage or preset; 3 some frames failed, the rest are done; 4 beyond
-tolerance; 5 nothing could be read; 6 cannot write; 130 interrupted, resumable.
+tolerance; 5 nothing (more) could be read; 6 cannot write; 130 interrupted, resumable.
 
 Completion: `eval "$(_GRADER_COMPLETE=bash_source grader)"` (or `zsh_source`); for fish
 `_GRADER_COMPLETE=fish_source grader | source`.

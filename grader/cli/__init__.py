@@ -60,7 +60,7 @@ Examples:
   grader apply hall.json shoot/ --out graded/
 
 Each command has its own --help.  Exit: 0 all done; 2 usage or preset; 3 some frames failed, the rest are
-done; 4 beyond tolerance; 5 nothing could be read; 6 cannot write; 130 interrupted, resumable; 1 a fault of
+done; 4 beyond tolerance; 5 nothing (more) could be read; 6 cannot write; 130 interrupted, resumable; 1 a fault of
 grader's own.""",
 )
 @click.option(
