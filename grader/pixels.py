@@ -20,8 +20,8 @@ from grader.colour import compiled
 from grader.colour.output import output_space
 from grader.model import Correction, Counts, Frame, Output
 
-_BAND_PIXELS: Final = 64 * _pixels_kernel.CHUNK
-"""Pixels that a thread takes at a time; whole chunks, so that threads change no result."""
+_BANDS_PER_THREAD: Final = 8
+"""So many that a thread held up elsewhere costs little, so few that starting them costs nothing."""
 
 _CLIPPED_FLOATS: Final = "no value is above 1.0: what is at 1.0 was taken as clipped, and kept white"
 
@@ -119,11 +119,17 @@ def _in_bands(source: Any, target: Any, prepared: Prepared, threads: int) -> tup
         outside, clipped = _pixels_kernel.grade(source, target, decode, steps, encode)
         return outside, clipped
 
+    chunks = -(-source.size // (3 * _pixels_kernel.CHUNK))
+    band = (
+        -(-chunks // (threads * _BANDS_PER_THREAD)) * 3 * _pixels_kernel.CHUNK
+    )  # whole chunks: same results
+
     def grade(start: int) -> tuple[int, int]:
-        band = slice(start, start + 3 * _BAND_PIXELS)
-        outside, clipped = _pixels_kernel.grade(source[band], target[band], decode, steps, encode)
+        outside, clipped = _pixels_kernel.grade(
+            source[start : start + band], target[start : start + band], decode, steps, encode
+        )
         return outside, clipped
 
     with ThreadPoolExecutor(threads) as pool:
-        counts = list(pool.map(grade, range(0, source.size, 3 * _BAND_PIXELS)))
+        counts = list(pool.map(grade, range(0, source.size, band)))
     return sum(outside for outside, _ in counts), sum(clipped for _, clipped in counts)
