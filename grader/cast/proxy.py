@@ -49,7 +49,7 @@ def build_proxy(frame: Frame) -> Proxy:
     if pixels.size == 0:
         raise TooFewUsablePixels("the frame is empty")
     width = cell_width(*pixels.shape[:2])
-    step = max(width // 3, 1)
+    step = _step(width)
     matrix = frame.space.rec2020_from_linear
     if frame.header.daylight_from_decoded is not None:
         matrix = frame.header.daylight_from_decoded @ matrix
@@ -58,8 +58,9 @@ def build_proxy(frame: Frame) -> Proxy:
         limits = (_CLIPPED_LEVEL[pixels.dtype], _dark_level(tables, _DARK_LINEAR[pixels.dtype]))
         averaged = average_integers(pixels, tables, *limits, width, step, matrix)
     else:
-        linear = _linear_floats(pixels[::step, ::step], frame.space.curves)
-        averaged = average_floats(linear, *_float_limits(linear), width / step, matrix)
+        rows, columns = (_looked_at(length, width, step) for length in pixels.shape[:2])
+        linear = _linear_floats(pixels[np.ix_(rows, columns)], frame.space.curves)
+        averaged = average_floats(linear, *_float_limits(linear), rows // width, columns // width, matrix)
     linear, usable, (clipped, dark, empty) = averaged
     return Proxy(linear, usable, frame.header, float(clipped), float(dark), float(empty))
 
@@ -74,6 +75,17 @@ def cell_width(height_px: int, width_px: int) -> int:
     """
     long, short = max(height_px, width_px), min(height_px, width_px)
     return max(-(-long // _LONG_PX), -(-short // _SHORT_PX), 1)
+
+
+def _step(width: int) -> int:
+    """Return the distance of the pixels that are looked at: three, or all up to four, along the side of a cell."""
+    return 1 if width < 5 else -(-width // 3)
+
+
+def _looked_at(length_px: int, width: int, step: int) -> NDArray[np.intp]:
+    """Return the places of the pixels that are looked at along one side of the frame: the same in each cell."""
+    places = np.arange(length_px)
+    return np.asarray(places[places % width % step == 0])
 
 
 @lru_cache(maxsize=16)

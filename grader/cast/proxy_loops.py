@@ -82,36 +82,42 @@ def average_integers(
 
 @jit
 def average_floats(
-    pixels: Float32, clipped: float, dark: float, width: float, matrix: NDArray[np.float64]
+    pixels: Float32,
+    clipped: float,
+    dark: float,
+    cell_rows: NDArray[np.intp],
+    cell_columns: NDArray[np.intp],
+    matrix: NDArray[np.float64],
 ) -> Averaged:
-    """Return the same for linear floating-point pixels, ``width`` of which make a cell; what is not a number is empty."""
-    height_px, width_px = pixels.shape[0], pixels.shape[1]
-    h, w = int(np.ceil(height_px / width - 1e-9)), int(np.ceil(width_px / width - 1e-9))
+    """Return the same for linear floating-point pixels; what is not a number is empty.
+
+    ``cell_rows`` (H,) and ``cell_columns`` (W,), both ascending, tell the cell of each pixel.
+    """
+    h, w = cell_rows[-1] + 1, cell_columns[-1] + 1
     linear, usable, left_out = np.zeros((h, w, 3), np.float32), np.zeros((h, w), np.float32), np.zeros(4)
-    for cy in range(h):
-        sums, used = np.zeros((w, 3)), np.zeros(w)
-        seen = np.zeros(w)
-        for y in range(
-            int(np.ceil(cy * width - 1e-9)), min(int(np.ceil((cy + 1) * width - 1e-9)), height_px)
-        ):
-            for x in range(width_px):
-                cx = min(int(x / width + 1e-9), w - 1)
-                seen[cx] += 1.0
-                left_out[3] += 1.0
-                r, g, b = pixels[y, x, 0], pixels[y, x, 1], pixels[y, x, 2]
-                top = max(r, g, b)
-                if not np.isfinite(r + g + b) or (r == 0.0 and g == 0.0 and b == 0.0):
-                    left_out[2] += 1.0
-                elif top >= clipped:
-                    left_out[0] += 1.0
-                elif top < dark:
-                    left_out[1] += 1.0
-                else:
-                    sums[cx, 0] += r
-                    sums[cx, 1] += g
-                    sums[cx, 2] += b
-                    used[cx] += 1.0
-        _finish_row(linear[cy], usable[cy], sums, used, seen, matrix)
+    sums, used, seen = np.zeros((w, 3)), np.zeros(w), np.zeros(w)
+    for y in range(len(cell_rows)):
+        for x in range(len(cell_columns)):
+            cx = cell_columns[x]
+            seen[cx] += 1.0
+            left_out[3] += 1.0
+            r, g, b = pixels[y, x, 0], pixels[y, x, 1], pixels[y, x, 2]
+            top = max(r, g, b)
+            if not np.isfinite(r + g + b) or (r == 0.0 and g == 0.0 and b == 0.0):
+                left_out[2] += 1.0
+            elif top >= clipped:
+                left_out[0] += 1.0
+            elif top < dark:
+                left_out[1] += 1.0
+            else:
+                sums[cx, 0] += r
+                sums[cx, 1] += g
+                sums[cx, 2] += b
+                used[cx] += 1.0
+        cy = cell_rows[y]
+        if y + 1 == len(cell_rows) or cell_rows[y + 1] > cy:
+            _finish_row(linear[cy], usable[cy], sums, used, seen, matrix)
+            sums[:], used[:], seen[:] = 0.0, 0.0, 0.0
     return linear, usable, left_out[:3] / left_out[3]
 
 
