@@ -18,8 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from grader.colour import white
-from grader.colour.opponent import _LMS_FROM_XYZ as LMS_FROM_XYZ
-from grader.colour.opponent import _OKLAB_FROM_LMS as OKLAB_FROM_LMS
+from grader.colour.opponent import LMS_FROM_XYZ, OKLAB_FROM_LMS
 from grader.colour.spaces import XYZ_FROM_REC2020
 
 Array = NDArray[np.float64]
@@ -35,6 +34,8 @@ B_BINS: Final = 64
 
 LMS_FROM_REC2020: Final[Array] = LMS_FROM_XYZ @ XYZ_FROM_REC2020
 AB_FROM_LOG_LMS: Final[Array] = OKLAB_FROM_LMS[1:] / 3.0
+_LOG_LMS_FROM_AB: Final = np.linalg.pinv(AB_FROM_LOG_LMS)
+_REC2020_FROM_LMS: Final = np.linalg.inv(LMS_FROM_REC2020)
 
 _MIRED_RANGE: Final = (70.0, 640.0)
 """Hottest blue sky shade to candle light and below. [mired] (common practice)"""
@@ -81,8 +82,8 @@ def linear_from_ab(ab: Array) -> Array:
     (..., 3) float64
         Linear Rec.2020, Y = 1; may be negative where the place lies outside the Rec.2020 primaries.
     """
-    lms = np.exp(np.asarray(ab, np.float64) @ np.linalg.pinv(AB_FROM_LOG_LMS).T)
-    linear = lms @ np.linalg.inv(LMS_FROM_REC2020).T
+    lms = np.exp(np.asarray(ab, np.float64) @ _LOG_LMS_FROM_AB.T)
+    linear = lms @ _REC2020_FROM_LMS.T
     return np.asarray(linear / (linear @ XYZ_FROM_REC2020[1])[..., None])
 
 

@@ -127,6 +127,7 @@ def plan_shoot(
         names=stretch_names(casts, times_s, lanes, numbers),
         known=known,
         settings=[row.settings for row in manual],
+        facts=[(stretch_doubt_deg(casts, one), _in_words(casts, one)) for one in held],
     )
     lights = _frame_lights(held)
     lights |= {guest: lights[host] for guest, host in guests.items() if host in lights}
@@ -165,6 +166,8 @@ class _Shoot:
     names: Mapping[int, str]
     known: Mapping[int, XY]
     settings: Sequence[Recipe | Fixed | None]
+    facts: Sequence[tuple[float, str]]
+    """Doubt of each stretch's light [degrees], and what it is, in words."""
 
 
 def stretch_names(
@@ -218,8 +221,8 @@ def _correct(shoot: _Shoot, at: int, pooled: Array | None) -> Correction:
 def _pooled(shoot: _Shoot, at: int, stretch: Stretch, place: Array, recipe: Recipe) -> Correction:
     """Return the correction by the light of the stretch, pulled toward the frame's own vote where it is odd."""
     cast, name = shoot.casts[at], shoot.names[at]
-    doubt_deg = stretch_doubt_deg(shoot.casts, stretch)
-    reason = _reason(shoot.casts, stretch, name)
+    doubt_deg, facts = shoot.facts[shoot.numbers[at]]
+    reason = f"light of stretch {name} ({facts})"
     flags: tuple[str, ...] = ()
     if cast.white_xy is None:
         reason, flags = f"nothing measured in this frame; {reason}", ("light-of-stretch",)
@@ -276,7 +279,8 @@ def stretch_doubt_deg(casts: Sequence[Cast], stretch: Stretch) -> float:
     return float(np.hypot(least, _OWN_DOUBT_SHARE * single / np.sqrt(len(stretch.rows))))
 
 
-def _reason(casts: Sequence[Cast], stretch: Stretch, name: str) -> str:
+def _in_words(casts: Sequence[Cast], stretch: Stretch) -> str:
+    """Return what the light of a stretch comes from, for the log."""
     count = len(stretch.rows)
     facts = ["1 frame" if count == 1 else f"{count} frames"]
     several = len({casts[row].header.body for row in stretch.rows})
@@ -290,7 +294,7 @@ def _reason(casts: Sequence[Cast], stretch: Stretch, name: str) -> str:
         facts.append("held by a grey card")
     elif stretch.unbiased:
         facts.append("body's bias removed by a grey card")
-    return f"light of stretch {name} ({', '.join(facts)})"
+    return ", ".join(facts)
 
 
 def _fixed_stretch(row: Sequence[object] | FixedStretch) -> FixedStretch:

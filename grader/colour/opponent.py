@@ -33,25 +33,25 @@ Array = NDArray[np.float64]
 _D65_XYZ: Final[Array] = xyz_from_xy(D65_XY)
 
 # Ottosson, "A perceptual color space for image processing", 2020, https://bottosson.github.io/posts/oklab/
-_LMS_FROM_XYZ_PUBLISHED: Final[Matrix] = np.array(
+LMS_FROM_XYZ_PUBLISHED: Final[Matrix] = np.array(
     [
         [0.8189330101, 0.3618667424, -0.1288597137],
         [0.0329845436, 0.9293118715, 0.0361456387],
         [0.0482003018, 0.2643662691, 0.6338517070],
     ]
 )
-_OKLAB_FROM_LMS: Final[Matrix] = np.array(
+OKLAB_FROM_LMS: Final[Matrix] = np.array(
     [
         [0.2104542553, 0.7936177850, -0.0040720468],
         [1.9779984951, -2.4285922050, 0.4505937099],
         [0.0259040371, 0.7827717662, -0.8086757660],
     ]
 )
-_LMS_FROM_XYZ: Final[Matrix] = _LMS_FROM_XYZ_PUBLISHED / (_LMS_FROM_XYZ_PUBLISHED @ _D65_XYZ)[:, None]
+LMS_FROM_XYZ: Final[Matrix] = LMS_FROM_XYZ_PUBLISHED / (LMS_FROM_XYZ_PUBLISHED @ _D65_XYZ)[:, None]
 """Rows scaled (by less than 5e-4) so that D65 as (0.3127, 0.3290) is neutral: with the published digits its
 b would be -1.2e-4, a cast where there is none."""
-_XYZ_FROM_LMS: Final[Matrix] = np.asarray(np.linalg.inv(_LMS_FROM_XYZ), np.float64)
-_LMS_FROM_OKLAB: Final[Matrix] = np.asarray(np.linalg.inv(_OKLAB_FROM_LMS), np.float64)
+_XYZ_FROM_LMS: Final[Matrix] = np.asarray(np.linalg.inv(LMS_FROM_XYZ), np.float64)
+_LMS_FROM_OKLAB: Final[Matrix] = np.asarray(np.linalg.inv(OKLAB_FROM_LMS), np.float64)
 
 
 def oklab_from_xyz(xyz: ArrayLike) -> Array:
@@ -75,8 +75,8 @@ def oklab_from_xyz(xyz: ArrayLike) -> Array:
     >>> oklab_from_xyz((0.0, 1.0, 0.0)).round(3)
     array([ 0.922, -0.671,  0.263])
     """
-    lms = np.asarray(xyz, np.float64) @ _LMS_FROM_XYZ.T
-    return np.asarray(np.cbrt(lms) @ _OKLAB_FROM_LMS.T)
+    lms = np.asarray(xyz, np.float64) @ LMS_FROM_XYZ.T
+    return np.asarray(np.cbrt(lms) @ OKLAB_FROM_LMS.T)
 
 
 def xyz_from_oklab(oklab: ArrayLike) -> Array:

@@ -6,7 +6,7 @@ distance from the Planckian locus in CIE 1960 uv, + on the green side.
 
 from __future__ import annotations
 
-from functools import cache
+from functools import cache, lru_cache
 from typing import Any, Final
 
 import numpy as np
@@ -169,7 +169,13 @@ def cct_duv_from_xy(xy: ArrayLike) -> tuple[float | None, float]:
     >>> round(cct_k), round(duv, 4)
     (6504, 0.0032)
     """
-    target = uv1960_from_xy(xy)
+    x, y = np.asarray(xy, np.float64)
+    return _nearest_on_locus(float(x), float(y))
+
+
+@lru_cache(maxsize=1024)
+def _nearest_on_locus(x: float, y: float) -> tuple[float | None, float]:
+    target = uv1960_from_xy((x, y))
     table_mired, table_uv = _locus_table()
     first, last = float(table_mired[0]), float(table_mired[-1])
     mired = float(table_mired[np.argmin(((table_uv - target) ** 2).sum(axis=-1))])
