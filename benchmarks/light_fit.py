@@ -17,7 +17,7 @@ from pathlib import Path
 import numpy as np
 from scipy.optimize import minimize
 
-from grader.cast import doubt, plane, vote
+from grader.cast import _natural_tables, doubt, natural, plane, vote
 from grader.cast.cells import cells_from_proxy
 from grader.cast.natural import mixture_density
 from grader.cast.proxy import build_proxy
@@ -108,21 +108,37 @@ def mixture_rows(share, mean, covariance):
     return np.column_stack([share, mean, covariance[:, 0, 0], covariance[:, 0, 1], covariance[:, 1, 1]])
 
 
-def print_densities(data):
+def fit_densities(data, keep):
+    """Return the mixtures of surface and of edge colours, the light taken out of each frame."""
     truth = plane.ab_from_linear(data.light)
-    votes = {
-        "SURFACE": [
-            vote.splat(c.ab[c.ok] - t, np.ones(c.ok.sum())) for c, t in zip(data.cells, truth, strict=True)
-        ],
-        "EDGE": [
-            vote.splat(p - t, w) for (p, w), t in zip(map(vote.edge_votes, data.cells), truth, strict=True)
-        ],
+    colours = {
+        "SURFACE": lambda c: (c.ab[c.ok], np.ones(c.ok.sum())),
+        "EDGE": vote.edge_votes,
     }
-    for name, histograms in votes.items():
+    found = {}
+    for name, votes in colours.items():
+        histograms = [
+            vote.splat(places - truth[i], weights)
+            for i, (places, weights) in ((i, votes(data.cells[i])) for i in keep)
+        ]
+        found[name] = fit_mixture(np.mean(histograms, axis=0).ravel(), plane.grid_places())
+    return found
+
+
+def print_densities(data):
+    for name, mixture in fit_densities(data, range(len(data.cells))).items():
         print(f"{name}: Final[tuple[Row, ...]] = (")
-        for row in fit_mixture(np.mean(histograms, axis=0).ravel(), plane.grid_places()):
+        for row in mixture:
             print("    ({:.4f}, {:.4f}, {:.4f}, {:.6f}, {:.6f}, {:.6f}),".format(*row))
         print(")")
+
+
+def evidence_with(data, mixtures):
+    """Return the evidence of every frame, with other densities than the shipped ones where given."""
+    for name, mixture in mixtures.items():
+        setattr(_natural_tables, name, mixture)
+    natural._spectrum.cache_clear()  # noqa: SLF001 - no part of the shipped tool changes its densities
+    return np.stack([vote.evidence(c) for c in data.cells])
 
 
 def fit_weights(features, prior, data, keep):
@@ -166,7 +182,8 @@ def apply_weights(features, prior, w):
 
 
 def print_weights(data):
-    features = np.stack([vote.evidence(c) for c in data.cells])
+    """Fit to all with the shipped densities; then densities and weights anew without the frames they are tried on."""
+    features = evidence_with(data, {})
     prior = vote.log_prior("scene") / vote.PRIOR_POWER
     everything = np.arange(len(features))
     w = fit_weights(features, prior, data, everything)
@@ -174,17 +191,20 @@ def print_weights(data):
     blocks = everything * BLOCKS // len(everything)
     lights = np.empty((len(features), 3))
     for block in range(BLOCKS):
-        w = fit_weights(features, prior, data, np.flatnonzero(blocks != block))
-        lights[blocks == block] = apply_weights(features[blocks == block], prior, w)
+        lights[blocks == block], _ = fitted_without(data, prior, blocks == block)
     print("blocks left out", told(data.errors(lights)))
     for sensor in np.unique(data.sensor):
-        mine, others = np.flatnonzero(data.sensor == sensor), np.flatnonzero(data.sensor != sensor)
-        w = fit_weights(features, prior, data, others)
-        print(
-            f"camera {sensor} left out",
-            w.round(2),
-            told(data.errors(apply_weights(features[mine], prior, w), mine)),
-        )
+        mine = data.sensor == sensor
+        found, w = fitted_without(data, prior, mine)
+        print(f"camera {sensor} left out", w.round(2), told(data.errors(found, mine)))
+
+
+def fitted_without(data, prior, left_out):
+    """Return the lights of the frames left out, and the weights, all fitted on the others."""
+    others = np.flatnonzero(~left_out)
+    features = evidence_with(data, fit_densities(data, others))
+    w = fit_weights(features, prior, data, others)
+    return apply_weights(features[left_out], prior, w), w
 
 
 def told(errors):
