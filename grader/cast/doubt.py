@@ -24,6 +24,8 @@ _LEAVE_BELOW, _BELIEVE_ABOVE = 0.8, 1.2
 """Casts of a finished picture, in units of their doubt, that are left alone and that are believed whole.
 (judgement: with these no packaged photograph under a cast of 40 mired or more ends worse than it began)"""
 _FLAT, _NOISE = 0.004, 0.4
+_CLIPPED_DEG: Final = 15.0
+"""Expected error of a frame of which nearly all is clipped; what was cut off may have been the light itself. (judgement)"""
 MOST_DEG: Final = 12.0
 """The lights of a shoot lie about so far apart: not to know the light at all is no worse. (judgement)"""
 
@@ -82,7 +84,7 @@ def is_no_picture(cells: Cells) -> bool:
     return float(np.corrcoef(first, second)[0, 1]) < _NOISE
 
 
-def doubt_deg(vote: Vote, cells: Cells, referred: Referred) -> float:
+def doubt_deg(vote: Vote, cells: Cells, referred: Referred, clipped_fraction: float = 0.0) -> float:
     """Return the expected error of a vote's mean light.
 
     Parameters
@@ -91,6 +93,8 @@ def doubt_deg(vote: Vote, cells: Cells, referred: Referred) -> float:
     cells : Cells
         Those that voted.
     referred : 'scene' or 'display'
+    clipped_fraction : float
+        Share of the frame that is clipped and therefore had no vote.
 
     Returns
     -------
@@ -101,7 +105,7 @@ def doubt_deg(vote: Vote, cells: Cells, referred: Referred) -> float:
         return MOST_DEG
     intercept, *factors = _FITTED[referred]
     expected = float(np.exp(intercept + signs(vote, cells) @ np.array(factors)))
-    return min(expected, MOST_DEG)
+    return min(float(np.hypot(expected, _CLIPPED_DEG * clipped_fraction)), MOST_DEG)
 
 
 def believed_light(light: Array, doubt_deg: float, referred: Referred) -> Array:

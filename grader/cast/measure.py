@@ -65,7 +65,8 @@ def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:
     vote = cast_vote(cells, referred, _camera_light(proxy))
     halves = halves_apart(cells, referred)
     lights = read_lights(cells)
-    doubt = MOST_DEG if is_coloured(lights) else doubt_deg(vote, cells, referred)
+    unsure = doubt_deg(vote, cells, referred, proxy.clipped_fraction)
+    doubt = MOST_DEG if is_coloured(lights) else unsure
     return replace(
         _cast(believed_light(vote.weights @ candidate_lights(), doubt, referred), proxy, recipe),
         doubt_deg=doubt,

@@ -145,6 +145,16 @@ def test_noise_and_one_flat_colour_are_never_sure(seed, base, grain, referred):
         assert cast.doubt_deg is None or "high-doubt" in cast.flags
 
 
+@pytest.mark.parametrize("exposure", [1.0, 2.0, 6.0])
+def test_what_is_clipped_makes_less_sure(exposure):
+    linear = PHOTOGRAPHS["coffee"] / PHOTOGRAPHS["coffee"].max()
+    over = np.minimum(linear * exposure, 1.0)
+    cast = measure(frame(over, "scene"))
+    share = build_proxy(frame(over, "scene")).clipped_fraction
+    assert cast.doubt_deg >= min(15.0 * share, 12.0) - 1e-9
+    assert share < 0.3 or "high-doubt" in cast.flags
+
+
 @pytest.mark.parametrize("name", ["astronaut", "coffee", "china.jpg"])
 def test_size_hardly_matters(name):
     linear = PHOTOGRAPHS[name]
