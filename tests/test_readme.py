@@ -18,8 +18,8 @@ def commands(session: str) -> list[str]:
     return [line[2:] for line in session.splitlines() if line.startswith("$ ")]
 
 
-def test_the_three_jobs_are_there() -> None:
-    assert {"neutralise", "drift", "preset"} <= set(SESSIONS)
+def test_the_jobs_are_there() -> None:
+    assert {"neutralise", "drift", "bodies", "preset"} <= set(SESSIONS)
     assert all(commands(session) for session in SESSIONS.values())
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +19,10 @@ from grader.model import Cast, Referred
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
+
+_DOUBT_SHARE: Final = 0.45
+"""Mean error of a step between bodies as a share of the spread that its covariance tells; 0.4 came out on simulated
+shoots of two kinds. (tuned: benchmarks/shoot_simulator.py)"""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -204,7 +209,7 @@ def _compared(
     )
     white = np.zeros(2)
     degrees = float(shoot_course.degrees_apart(white, step.ab))
-    doubt_deg = float(shoot_course.degrees_apart(white, np.sqrt(np.diag(step.covariance))))
+    doubt_deg = _DOUBT_SHARE * float(shoot_course.degrees_apart(white, np.sqrt(np.diag(step.covariance))))
     match = Match(
         first.body, second.body, first.referred, step, degrees, doubt_deg, applied=degrees > doubt_deg
     )
