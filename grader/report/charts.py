@@ -168,7 +168,7 @@ def _texts(rows: Sequence[FrameRow]) -> dict[str, Any]:
         return table.setdefault(sentence, len(table))
 
     columns = {
-        "words": [index_of(words.cast_words(r.yellow_blue, r.green_magenta, r.delta_e_2000)) for r in rows],
+        "words": [index_of(words.frame_cast(r)) for r in rows],
         "shift": [index_of(words.shift_words(r.shift_mired, r.shift_duv)) for r in rows],
         "reason": [index_of(r.reason) for r in rows],
         "status": [index_of(r.status) for r in rows],

@@ -136,7 +136,7 @@ def _put(page: _Page, corner: tuple[int, int], row: FrameRow, name: str, thumbna
 def _caption(draw: ImageDraw.ImageDraw, corner: tuple[int, int], row: FrameRow, name: str) -> None:
     told = row.error if row.status == "failed" else "; ".join(flag_words(flag) for flag in row.flags)
     mark = "FAILED: " if row.status == "failed" else "LOOK: " if row.needs_eye else ""
-    cast = words.cast_words(row.yellow_blue, row.green_magenta, row.delta_e_2000)
+    cast = words.frame_cast(row)
     lines = [(name, 24), *((line, 19) for line in _wrapped(mark + (told or cast), 19))]
     x, y = corner
     for line, size in lines[:4]:

@@ -108,6 +108,13 @@ def cast_words(yellow_blue: float | None, green_magenta: float | None, delta_e_2
     return "no visible cast" if delta_e_2000 < 1 else f"{strength} {hues} cast"
 
 
+def frame_cast(row: FrameRow) -> str:
+    """Return a frame's cast in words; of coloured light the figures say little, and no strength is told."""
+    if "coloured-light" in row.flags:
+        return "coloured light: outside what is measured"
+    return cast_words(row.yellow_blue, row.green_magenta, row.delta_e_2000)
+
+
 def hue_words(yellow_blue: float, green_magenta: float) -> str:
     """Return the colour or the two colours of a cast, the larger part first."""
     parts = [

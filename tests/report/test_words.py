@@ -1,7 +1,7 @@
 import pytest
 
 from grader.report import verdict, words
-from grader.report.records import Body, Stretch
+from grader.report.records import Body, FrameRow, Stretch
 from grader.report.recount import read_shoot
 
 HOUR = {"first_taken_at": "2031-05-03T12:00:00", "last_taken_at": "2031-05-03T13:00:00"}
@@ -112,3 +112,10 @@ def test_a_file_that_could_not_be_read_is_no_body(lines):
     assert [body.label for body in shoot.bodies] == ["A", "B"]
     unnamed = broken | {"status": "graded"}
     assert [body.label for body in read_shoot([*lines[:-1], unnamed]).bodies] == ["A", "B", "C"]
+
+
+def test_no_strength_is_told_of_coloured_light():
+    stage = FrameRow("a.dng", {}, yellow_blue=0.006, green_magenta=0.01, delta_e_2000=2.0)
+    assert words.frame_cast(stage) == "a slight magenta and yellow cast"
+    coloured = FrameRow("a.dng", {}, yellow_blue=0.006, delta_e_2000=2.0, flags=("coloured-light",))
+    assert "coloured light" in words.frame_cast(coloured)
