@@ -1,8 +1,9 @@
 """The plan: from the casts of a whole shoot to one correction for each frame.
 
 Capture order gives lanes (`shoot_order`), lanes give parts (`shoot_parts`), parts give stretches and their
-lights (`shoot_lights`, `stretches`, `bodies`), known lights hold them (`pins`), each frame is weighed
-against its stretch (`shoot_odd`), and its light becomes a correction (`correction`).
+lights (`shoot_lights`, `stretches`, `bodies`), known lights hold them (`pins`), an automatic balance moves
+finished frames around them (`shoot_balance`), each frame is weighed against its stretch (`shoot_odd`), and its
+light becomes a correction (`correction`).
 """
 
 from __future__ import annotations
@@ -19,6 +20,7 @@ from grader.cast import plane, shoot_course, shoot_order, vote
 from grader.cast.correction import correction_for, fixed_correction
 from grader.cast.doubt import believed_light
 from grader.cast.pins import apply_pins
+from grader.cast.shoot_balance import balanced_anew
 from grader.cast.shoot_course import Maps
 from grader.cast.shoot_lights import Match, Stretch, find_lights, find_matches
 from grader.cast.shoot_odd import oddness
@@ -118,6 +120,7 @@ def plan_shoot(
     guests = hosts(casts, lanes, owner, shoot_order.BREAK_S)
     held = apply_pins(casts, found, {guests.get(at, at): xy for at, xy in known.items()})
     numbers = owner | {guest: owner[host] for guest, host in guests.items()}
+    lights, moved_deg = _frame_lights(casts, maps, held)
     shoot = _Shoot(
         casts=casts,
         recipe=recipe,
@@ -128,8 +131,8 @@ def plan_shoot(
         known=known,
         settings=[row.settings for row in manual],
         facts=[(stretch_doubt_deg(casts, one), _in_words(casts, one)) for one in held],
+        moved_deg=moved_deg,
     )
-    lights = _frame_lights(held)
     lights |= {guest: lights[host] for guest, host in guests.items() if host in lights}
     corrections = tuple(_timed(_correct(shoot, at, lights.get(at)), time) for at, time in enumerate(times_s))
     return Plan(corrections, tuple(held), tuple(matches))
@@ -140,10 +143,28 @@ def _timed(correction: Correction, time_s: float) -> Correction:
     return correction if math.isfinite(time_s) else replace(correction, flags=(*correction.flags, "no-time"))
 
 
-def _frame_lights(found: Sequence[Stretch]) -> dict[int, Array]:
-    """Return the light of each frame that is pooled, by its place in the list of casts."""
+def _frame_lights(
+    casts: Sequence[Cast], maps: Maps, found: Sequence[Stretch]
+) -> tuple[dict[int, Array], dict[int, float]]:
+    """Return the light of each frame that is pooled, by its place in the list of casts.
+
+    The second are the doubts of frames that their camera balanced one by one. [degrees]
+    """
     pooled = [stretch for stretch in found if stretch.light is not None]
-    return {int(row): place for s in pooled for row, place in zip(s.rows, s.places, strict=True)}
+    lights = {int(row): place for s in pooled for row, place in zip(s.rows, s.places, strict=True)}
+    moved_deg: dict[int, float] = {}
+    for stretch in pooled:
+        if stretch.referred != "display" or stretch.pinned:
+            continue
+        bodies = np.array([casts[row].header.body for row in stretch.rows])
+        for body in np.unique(bodies):
+            own = bodies == body
+            balance = balanced_anew(maps[stretch.rows[own]], stretch.places[own])
+            if balance is not None:
+                rows = [int(row) for row in stretch.rows[own]]
+                lights |= dict(zip(rows, balance.places, strict=True))
+                moved_deg |= dict.fromkeys(rows, balance.doubt_deg)
+    return lights, moved_deg
 
 
 def compare_bodies(casts: Sequence[Cast], *, clocks: Mapping[str, float] | None = None) -> tuple[Match, ...]:
@@ -168,6 +189,8 @@ class _Shoot:
     settings: Sequence[Recipe | Fixed | None]
     facts: Sequence[tuple[float, str]]
     """Doubt of each stretch's light [degrees], and what it is, in words."""
+    moved_deg: Mapping[int, float]
+    """Doubt of the frames that were balanced one by one. [degrees]"""
 
 
 def stretch_names(
@@ -223,6 +246,9 @@ def _pooled(shoot: _Shoot, at: int, stretch: Stretch, place: Array, recipe: Reci
     cast, name = shoot.casts[at], shoot.names[at]
     doubt_deg, facts = shoot.facts[shoot.numbers[at]]
     reason = f"light of stretch {name} ({facts})"
+    if at in shoot.moved_deg:
+        doubt_deg = math.hypot(doubt_deg, shoot.moved_deg[at])
+        reason += ", moved toward its own measurement: these frames were balanced one by one"
     flags: tuple[str, ...] = ()
     if cast.white_xy is None:
         reason, flags = f"nothing measured in this frame; {reason}", ("light-of-stretch",)
