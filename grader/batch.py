@@ -12,7 +12,8 @@ from typing import Any
 
 from grader.log import Line
 from grader.model import Fixed, Recipe
-from grader.passes import Batch, Options, Paths, Progress
+from grader.options import Options, Paths, Progress
+from grader.passes import Batch
 from grader.preset import Preset
 from grader.workers import Stop
 

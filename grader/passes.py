@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Iterator, Mapping
-from dataclasses import asdict, dataclass, field, replace
+from collections.abc import Callable, Iterator
+from dataclasses import asdict, replace
 from pathlib import Path
 from typing import Any, Self
 
@@ -14,6 +14,7 @@ from grader.errors import GraderError, MissingFile, PresetError
 from grader.halt import cause_to_halt, told_how_far
 from grader.log import Line, graded_line, measured_line, run_line
 from grader.model import Cast, Correction, Fixed, ReadLimits, Recipe
+from grader.options import Options, Paths, Progress
 from grader.preset import Preset, make_preset
 from grader.records import graded_before_record, planned_record
 from grader.resume import Earlier, Finished
@@ -22,35 +23,6 @@ from grader.shootfile import known_lights, read_stretches, resolve_against, reso
 from grader.sources import check_target_folder, find_sources, targets_for
 from grader.target import Target, has_arrived, written_elsewhere
 from grader.workers import Outcome, Pool, Staff, Stop
-
-LOG_NAME = "grader-log.jsonl"
-Paths = Iterable[str | os.PathLike[str]]
-Progress = Callable[[str, int, int], None]
-"""Called with the stage (``measure`` or ``grade``), frames done, frames in all."""
-
-
-@dataclass(frozen=True, slots=True)
-class Options:
-    """How a batch is run; what it does to the pictures is in its preset."""
-
-    recurse: bool = False
-    pool: Pool = field(default_factory=Pool)
-    limits: ReadLimits = field(default_factory=ReadLimits)
-    log: str | os.PathLike[str] | None = None
-    overwrite: bool = False
-    resume: bool = False
-    dry_run: bool = False
-    clocks: Mapping[str, float] = field(default_factory=dict)
-    """Seconds to add to the clock of a body."""
-    grey_cards: tuple[str, ...] = ()
-    """``FRAME@X,Y,W,H``: a known neutral in a frame."""
-    stretches: str | os.PathLike[str] | None = None
-    """CSV of first file, last file: boundaries fixed by a person."""
-    regrade_deg: float = 0.2
-    """On resume, a finished frame is graded again when its correction moved by more than this angle."""
-    against: str | os.PathLike[str] | None = None
-    """A frame or fixed preset whose light every frame is compared with."""
-    command: tuple[str, ...] = ()
 
 
 class Batch:
@@ -73,7 +45,7 @@ class Batch:
         self.options = options or Options()
         self.stop = stop or Stop()
         self.out = None if out is None else Path(out)
-        self.log_path = _log_path(self.out, self.options)
+        self.log_path = self.options.log_path(self.out)
         self.summary: Line = {}
         self._progress = progress or (lambda _stage, _done, _total: None)
         self.preset = _resolved(preset, self.options.limits)
@@ -427,9 +399,3 @@ def _resolved(preset: Preset | Recipe | Fixed | None, limits: ReadLimits) -> Pre
         return make_preset("unsaved", resolve_toward(Recipe() if preset is None else preset, limits))
     settings = resolve_toward(preset.settings, limits)
     return preset if settings is preset.settings else make_preset(preset.name, settings, preset.description)
-
-
-def _log_path(out: Path | None, options: Options) -> Path | None:
-    if options.log is not None:
-        return Path(options.log)
-    return None if out is None else out / LOG_NAME

@@ -17,7 +17,7 @@ from grader.batch import Batch, Options
 from grader.errors import PresetError
 from grader.log import read_log
 from grader.model import Fixed, Output, Recipe
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 from grader.workers import Pool, Stop
 
 SCHEMA = json.loads((Path(__file__).parents[1] / "docs" / "log.schema.json").read_text(encoding="utf-8"))

@@ -14,7 +14,7 @@ from grader import cli
 from grader.files import hash_file
 from grader.log import encode_line
 from grader.model import Output, Recipe
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 from grader.workers import Pool, Stop
 
 

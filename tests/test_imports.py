@@ -37,10 +37,24 @@ ALLOWED = {
     "reporting": LEAVES | {"files", "log", "pixels", "report"},
     "checking": LEAVES | {"cast", "colour", "files", "log", "resume", "room", "workers"},
     "exporting": LEAVES | {"cast", "clf", "log", "preset"},
+    "options": LEAVES | {"workers"},
     "passes": LEAVES
-    | {"cast", "colour", "halt", "jobs", "log", "preset", "records", "resume", "room", "run", "shootfile"}
+    | {
+        "cast",
+        "colour",
+        "halt",
+        "jobs",
+        "log",
+        "options",
+        "preset",
+        "records",
+        "resume",
+        "room",
+        "run",
+        "shootfile",
+    }
     | {"sources", "target", "workers"},
-    "batch": LEAVES | {"log", "passes", "preset", "workers"},
+    "batch": LEAVES | {"log", "options", "passes", "preset", "workers"},
 }
 ALLOWED["cli"] = set(ALLOWED)
 LATE = {("model", "colour"), ("passes", ""), ("cluster", ""), ("cli", ""), ("files", "")}

@@ -15,7 +15,7 @@ from grader.batch import Batch, Options
 from grader.errors import DamagedFile, PresetError, WorkerFailed
 from grader.log import encode_line, read_log
 from grader.model import Fixed, Output, Recipe
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 from grader.resume import Earlier
 from grader.workers import Stop
 

@@ -15,7 +15,7 @@ from batchkit import encoded_scene
 
 from grader import jobs
 from grader.atomic import PART
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 
 LIGHTS = ((0.40, 0.385), (0.36, 0.365), (0.3127, 0.3290))
 

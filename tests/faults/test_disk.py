@@ -22,7 +22,7 @@ from grader.batch import Batch, Options
 from grader.errors import DiskFull, MissingFile, PresetError, WriteFailed
 from grader.log import read_log
 from grader.model import Output, ReadLimits, Recipe
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 from grader.workers import Pool
 
 RESUME = Options(resume=True)

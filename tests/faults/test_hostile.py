@@ -14,7 +14,7 @@ from grader import cli
 from grader.batch import Options
 from grader.errors import DamagedFile, GraderError, PresetError, WriteFailed
 from grader.log import encode_line, read_log
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 
 PACKAGE = Path(grader.__file__).parent
 posix = pytest.mark.skipif(os.name != "posix", reason="links and pipes are POSIX")

@@ -17,7 +17,7 @@ import pytest
 from faults.faultkit import assert_same_end, digests, write_shoot
 
 import grader
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 
 pytestmark = pytest.mark.skipif(not hasattr(os, "fork"), reason="forks and signals are POSIX")
 SCRIPT = Path(__file__).with_name("crashing.py")

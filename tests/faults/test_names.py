@@ -17,7 +17,7 @@ import grader
 from grader import cli
 from grader.batch import Options
 from grader.log import read_log
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 from grader.workers import Pool
 
 NAMES = [

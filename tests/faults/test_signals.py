@@ -14,7 +14,7 @@ from faults.faultkit import assert_same_end, unfinished, write_shoot
 import grader
 from grader.batch import Options
 from grader.log import read_log
-from grader.passes import LOG_NAME
+from grader.options import LOG_NAME
 
 pytestmark = pytest.mark.skipif(os.name != "posix", reason="signals are POSIX")
 SLOW = """
