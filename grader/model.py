@@ -308,6 +308,9 @@ class Recipe:
     pooling: bool = True
     match_bodies: bool = True
     coloured_light: Literal["leave", "correct"] = "leave"
+    linear_tiff: Referred = "display"
+    """What floating-point TIFFs in linear light hold: finished pictures, or the light of the scene as a raw
+    developer at the camera's daylight setting leaves it."""
     tolerance_delta_e_2000: float | None = None
     output: Output = field(default_factory=Output)
 

@@ -128,7 +128,7 @@ class Batch:
         known: dict[str, Cast] = {}
         work = []
         for path in (source.path for source in self.sources):
-            cast = self._earlier.cast(path, recipe.opponent)
+            cast = self._earlier.cast(path, recipe)
             given_up = self._earlier.given_up(path)
             if cast is not None:
                 known[path] = cast
@@ -200,11 +200,11 @@ class Batch:
                 yield self._graded(path, lines[path], outcome.result, finished[path])
 
     def _grade_each_by_itself(self) -> Iterator[Line]:
-        opponent = self.settings.opponent if isinstance(self.settings, Recipe) else Recipe().opponent
+        recipe = self.settings if isinstance(self.settings, Recipe) else Recipe()
         known: dict[str, tuple[Cast, Finished]] = {}
         work = []
         for path in (source.path for source in self.sources):
-            cast, finished = self._earlier.cast(path, opponent), None
+            cast, finished = self._earlier.cast(path, recipe), None
             given_up = self._earlier.given_up(path)
             if given_up is not None:
                 yield from self._failed(path, given_up)

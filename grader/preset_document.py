@@ -173,6 +173,9 @@ class RecipeDocument(_Strict):
     """Bring camera bodies that saw the same light onto one look."""
     coloured_light: Literal["leave", "correct"] = "leave"
     """What to do with stage light and other coloured light."""
+    linear_tiff: Referred = "display"
+    """What floating-point TIFFs in linear light hold: finished pictures (display), or the light of the scene as a raw
+    developer at the camera's daylight setting leaves it (scene)."""
     tolerance_delta_e_2000: Annotated[float, Field(gt=0.0, le=100.0)] | None = None
     """Largest cast of a mid grey that is still in order; null for no check. [Delta E 2000]"""
     output: OutputDocument = OutputDocument()

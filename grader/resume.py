@@ -16,7 +16,7 @@ from typing import Any, Final
 from grader.errors import DamagedFile, GraderError, WorkerFailed
 from grader.log import cast_from_line, correction_from_line, written_from_line
 from grader.log_file import Line, Log, encode_line, settings_of
-from grader.model import Cast, Correction, Counts, Opponent, Written
+from grader.model import Cast, Correction, Counts, Header, Recipe, Written
 
 _MOST_TRIES: Final = 2
 _STATUSES: Final = ("measured", "planned", "graded", "failed", "skipped")
@@ -56,7 +56,7 @@ class Earlier:
         self.same_settings = log is not None and settings_of(log.run) == settings_of(first)
         self._same_version = log is not None and log.run.get("version") == first["version"]
 
-    def cast(self, file: str, opponent: Opponent) -> Cast | None:
+    def cast(self, file: str, recipe: Recipe) -> Cast | None:
         """Return the light measured of a file; None where it has to be measured (again)."""
         line = self._line(file, "measured") if self._same_version else None
         if line is None:
@@ -65,8 +65,9 @@ class Earlier:
             cast = cast_from_line(line)
         except DamagedFile:
             return None
-        usable = cast.header.sha256 is not None and cast.header.file == file and cast.opponent == opponent
-        return cast if usable else None
+        usable = cast.header.sha256 is not None and cast.header.file == file
+        same = cast.opponent == recipe.opponent and _as_told_now(cast.header, recipe)
+        return cast if usable and same else None
 
     def holds(self, line: Line) -> bool:
         """Whether the log has exactly this frame line already, but for how long it took."""
@@ -234,3 +235,8 @@ def seen(file: str) -> list[int] | None:
     except OSError:
         return None
     return [state.st_size, state.st_mtime_ns]
+
+
+def _as_told_now(header: Header, recipe: Recipe) -> bool:
+    """Return whether a file was measured as the recipe takes it; of a TIFF that could be linear the log does not say."""
+    return header.format != "tiff" or header.referred == recipe.linear_tiff

@@ -188,6 +188,7 @@ recipes = st.builds(
     pooling=st.booleans(),
     match_bodies=st.booleans(),
     coloured_light=st.sampled_from(["leave", "correct"]),
+    linear_tiff=st.sampled_from(["display", "scene"]),
     tolerance_delta_e_2000=st.none() | st.floats(0.01, 100),
     output=outputs,
 )

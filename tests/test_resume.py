@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 import tifffile
+from batchkit import write_jpeg
 from faults.faultkit import assert_same_end, comparable, digests, write_shoot
 
 import grader
@@ -142,6 +143,17 @@ def test_another_opponent_space_is_measured_anew(shoot: Path, tmp_path: Path, co
     counted.measured.clear()
     run(shoot, tmp_path / "out", Recipe(opponent="cielab"))
     assert len(counted.measured) == 9
+
+
+def test_tiffs_taken_for_something_else_are_measured_anew(
+    shoot: Path, tmp_path: Path, counted: Counted
+) -> None:
+    write_jpeg(shoot / "beside.jpg")
+    run(shoot, tmp_path / "out")
+    counted.measured.clear()
+    run(shoot, tmp_path / "out", Recipe(linear_tiff="scene"))
+    assert len(counted.measured) == 9
+    assert "beside.jpg" not in counted.measured
 
 
 def test_another_version_trusts_nothing(
@@ -318,11 +330,11 @@ def test_lines_of_an_old_log_are_looked_at_before_they_are_used(shoot: Path, tmp
     log = read_log(tmp_path / "out" / LOG_NAME)
     file, by_status = next(iter(log.lines.items()))
     earlier, target = Earlier(log, log.run), Path(file).name
-    assert earlier.cast(file, "oklab") is not None
+    assert earlier.cast(file, Recipe()) is not None
     assert earlier.finished(file, target) is not None
     assert earlier.finished(file, "other.tif") is None
     by_status["measured"]["cast"]["cct_k"] = "warm"
-    assert earlier.cast(file, "oklab") is None
+    assert earlier.cast(file, Recipe()) is None
     by_status["graded"]["correction"]["matrix"] = [[1, 2], [3, 4]]
     assert earlier.finished(file, target) is None
     by_status["graded"]["correction"] = None

@@ -13,7 +13,7 @@ from grader.cast.doubt import MOST_DEG, believed_light, doubt_deg
 from grader.cast.flags import frame_flags, is_coloured, light_flags
 from grader.cast.halves import halves_apart
 from grader.cast.plane import GRID
-from grader.cast.proxy import build_proxy
+from grader.cast.proxy import build_proxy, is_identity
 from grader.cast.readings import read_lights
 from grader.cast.vote import Vote, candidate_lights, cast_vote
 from grader.colour.difference import grey_delta_e_2000
@@ -36,7 +36,7 @@ def measure(frame: Frame, recipe: Recipe | None = None) -> Cast:
     ----------
     frame : Frame
     recipe : Recipe, optional
-        Only the opponent space matters here.
+        Only the opponent space, and what linear TIFFs hold, matter here.
 
     Returns
     -------
@@ -48,7 +48,16 @@ def measure(frame: Frame, recipe: Recipe | None = None) -> Cast:
     TooFewUsablePixels
         The frame has no pixel at all.
     """
-    return measure_proxy(build_proxy(frame), recipe)
+    recipe = recipe or Recipe()
+    return measure_proxy(build_proxy(as_told(frame, recipe)), recipe)
+
+
+def as_told(frame: Frame, recipe: Recipe) -> Frame:
+    """Return the frame, scene-referred if it is a linear floating-point TIFF and the recipe says that those are."""
+    linear = frame.header.format == "tiff" and frame.pixels.dtype.kind == "f"
+    if not linear or recipe.linear_tiff == "display" or not all(map(is_identity, frame.space.curves)):
+        return frame
+    return replace(frame, header=replace(frame.header, referred=recipe.linear_tiff))
 
 
 def measure_proxy(proxy: Proxy, recipe: Recipe | None = None) -> Cast:

@@ -101,14 +101,15 @@ def _dark_level(tables: NDArray[np.float32], dark: float) -> int:
 
 
 def _linear_floats(pixels: NDArray[Any], curves: tuple[Curve, Curve, Curve]) -> NDArray[np.float32]:
-    if all(_is_identity(curve) for curve in curves):
+    if all(is_identity(curve) for curve in curves):
         return np.ascontiguousarray(pixels, np.float32)
     with np.errstate(all="ignore"):
         channels = [decode(curve, pixels[..., i].astype(np.float64)) for i, curve in enumerate(curves)]
     return np.stack(channels, axis=-1).astype(np.float32)
 
 
-def _is_identity(curve: Curve) -> bool:
+def is_identity(curve: Curve) -> bool:
+    """Return whether a curve leaves values as they are: linear light."""
     return curve.samples is None and (curve.g, curve.a, curve.b, curve.e, curve.d) == (
         1.0,
         1.0,

@@ -69,6 +69,11 @@ recipe = _options(
         type=click.Choice(["leave", "correct"]),
         help="What to do with stage gels, neon and the like. [leave]",
     ),
+    click.option(
+        "--linear-tiff",
+        type=click.Choice(["display", "scene"]),
+        help="Float TIFFs in linear light: finished pictures, or raw light developed at the daylight setting. [display]",
+    ),
     click.option("--per-frame", is_flag=True, help="Correct each frame by itself, without its neighbours."),
     click.option(
         "--match-bodies/--no-match-bodies", default=None, help="Bring camera bodies onto one look. [match]"
@@ -183,7 +188,7 @@ def _aim(toward: str) -> str:
 
 _RECIPE_FIELDS = (
     "keep_yellow_blue", "keep_green_magenta", "toward", "opponent", "adaptation", "degree", "coloured_light",
-    "match_bodies", "tolerance_delta_e_2000",
+    "linear_tiff",     "match_bodies", "tolerance_delta_e_2000",
 )  # fmt: skip
 _OUTPUT_FIELDS = {
     "format": "output_format",

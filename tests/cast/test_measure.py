@@ -13,6 +13,7 @@ import pytest
 import skimage.data
 import skimage.transform
 import sklearn.datasets
+import tifffile
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -299,3 +300,23 @@ def test_dark_and_clipped():
     assert "dark" in measure(frame(PHOTOGRAPHS["astronaut"] * 0.005)).flags
     bright = np.minimum(PHOTOGRAPHS["astronaut"] * 4, 1.0)
     assert "clipped" in measure(frame(bright)).flags
+
+
+# ---- what a linear TIFF holds
+
+
+def test_a_linear_tiff_is_what_the_recipe_says(tmp_path):
+    """Tungsten light on a photograph, at the daylight setting: a usual light of a scene, a large cast of a picture."""
+    light = xy_from_cct_duv(2856, 0.0)
+    picture = (PHOTOGRAPHS["coffee"] * linear_from_xy(light)).astype(np.float32)
+    linear, rounded = tmp_path / "linear.tif", tmp_path / "coded.tif"
+    tifffile.imwrite(linear, picture, photometric="rgb")
+    tifffile.imwrite(rounded, (np.clip(picture, 0, 1) * 65535).astype(np.uint16), photometric="rgb")
+    scene = Recipe(linear_tiff="scene")
+    assert measure(grader.read(linear)).header.referred == "display"
+    assert measure(grader.read(linear), scene).header.referred == "scene"
+    assert measure(grader.read(rounded), scene).header.referred == "display"
+    array = frame(picture, "display")
+    assert measure(array, scene).header.referred == "display"
+    as_array = measure(replace(grader.read(linear), header=replace(array.header, referred="scene")))
+    assert measure(grader.read(linear), scene).white_xy == as_array.white_xy
