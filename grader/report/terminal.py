@@ -118,6 +118,7 @@ def _stretch_columns(shoot: Shoot) -> list[_Column]:
         column("95 % range", lambda s: _range(s.drift_mired_low, s.drift_mired_high, 1), rank=2),
         column("drift Duv/h", lambda s: words.signed(s.drift_duv_per_hour, 4, "-"), rank=4),
         column("95 % range", lambda s: _range(s.drift_duv_low, s.drift_duv_high, 4), rank=5),
+        column("jump deg", lambda s: words.plain(s.largest_jump_deg, 1), rank=4),
         column("", words.drift_words, rank=1, right=False),
     ]
 
