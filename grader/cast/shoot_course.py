@@ -207,24 +207,27 @@ def _forward(likelihood: Maps, prior: Array, odds: Array, wander: float) -> tupl
 
 
 def _wandered(weights: Array, wander: float) -> Array:
+    """Return weights after a random step of the light, reflected where the grid ends."""
     if wander == 0.0:
         return weights
-    grid = np.zeros(A_BINS * B_BINS)
-    grid[plane.candidate_bins()] = weights
-    moved = _wander_taps(A_BINS, 0.4 * wander) @ grid.reshape(A_BINS, B_BINS) @ _wander_taps(B_BINS, wander)
-    return np.asarray(moved.ravel()[plane.candidate_bins()])
+    flat = np.zeros(A_BINS * B_BINS)
+    flat[plane.candidate_bins()] = weights
+    grid = flat.reshape(A_BINS, B_BINS)
+    for along, spread in ((grid, 0.4 * wander), (grid.T, wander)):
+        share, times = _to_neighbours(spread)
+        for _ in range(times):
+            flow = share * (along[1:] - along[:-1])
+            along[:-1] += flow
+            along[1:] -= flow
+    return np.asarray(flat[plane.candidate_bins()])
 
 
 @cache
-def _wander_taps(bins: int, wander: float) -> Array:
-    """Return a symmetric transition that is right in its variance, however small beside a bin."""
-    variance = (wander / STEP) ** 2
+def _to_neighbours(spread: float) -> tuple[float, int]:
+    """Return what goes to either neighbour, and how many times, for a step of this standard deviation, however small beside a bin."""
+    variance = (spread / STEP) ** 2
     times = max(int(np.ceil(2.0 * variance)), 1)
-    side = variance / times / 2.0
-    step = (1.0 - 2.0 * side) * np.eye(bins) + side * (np.eye(bins, k=1) + np.eye(bins, k=-1))
-    step[0, 0] += side
-    step[-1, -1] += side
-    return np.asarray(np.linalg.matrix_power(step, times))
+    return variance / times / 2.0, times
 
 
 @lru_cache(maxsize=1024)
