@@ -16,8 +16,8 @@ _CLIPPED: Final = {np.dtype(np.uint8): 254, np.dtype(np.uint16): 65_200}
 """Encoded values from which a pixel counts as clipped: the same half per cent as the proxy's."""
 _SHARED: Final = 2e-4
 """Floats count as clipped where this share of the pixels has the largest value there is, as in the proxy."""
-_SKIP_FROM: Final = 6
-"""From this cell width on, every second row and column is enough, as in the proxy."""
+_ALL_UP_TO: Final = 4
+"""Up to this cell width every pixel is looked at, beyond it three rows and columns of a cell, as in the proxy."""
 _ROWS: Final = 64
 
 
@@ -46,7 +46,7 @@ def reduced(frame: Frame, target_px: int) -> Frame:
     width = cell_width(height_px, width_px, target_px)
     if width == 1:
         return frame
-    step = 2 if width >= _SKIP_FROM else 1
+    step = 1 if width <= _ALL_UP_TO else -(-width // 3)
     linear, state, white = _reduce(frame, width, step)
     encoded = np.stack([encode(c, linear[..., i]) for i, c in enumerate(frame.space.curves)], axis=-1)
     pixels = _at_depth(encoded, frame.pixels.dtype)
@@ -121,10 +121,7 @@ def _average_integers(pixels: Any, tables: Any, clipped: int, width: int, step: 
                         g += tables[1, j]
                         b += tables[2, k]
                         used += 1
-            if used > 0 and used >= over and used >= empty:
-                linear[cy, cx, 0], linear[cy, cx, 1], linear[cy, cx, 2] = r / used, g / used, b / used
-            else:
-                state[cy, cx] = 1 if over > empty else 2
+            state[cy, cx] = _settle(linear[cy, cx], (r, g, b), used, over, empty)
     return linear, state
 
 
@@ -150,8 +147,14 @@ def _average_floats(encoded: Any, light: Any, clipped: float, width: int, step: 
                         g += j
                         b += k
                         used += 1
-            if used > 0 and used >= over and used >= empty:
-                linear[cy, cx, 0], linear[cy, cx, 1], linear[cy, cx, 2] = r / used, g / used, b / used
-            else:
-                state[cy, cx] = 1 if over > empty else 2
+            state[cy, cx] = _settle(linear[cy, cx], (r, g, b), used, over, empty)
     return linear, state
+
+
+@jit
+def _settle(mean: Any, sums: Any, used: int, over: int, empty: int) -> int:
+    """Write the mean of a cell (3,) if most of its pixels were measured; return its state."""
+    if used > 0 and used >= over and used >= empty:
+        mean[0], mean[1], mean[2] = sums[0] / used, sums[1] / used, sums[2] / used
+        return 0
+    return 1 if over > empty else 2
