@@ -29,10 +29,14 @@ _WANDER: Final = 0.001
 _SWITCH_PROBABILITY: Final = 0.5
 _SURE_PROBABILITY: Final = 0.6
 """Of a jump at one frame: two neighbours that are both so sure cannot be one jump. (probabilities)"""
+_WEAK_PROBABILITY: Final = 0.1
+"""Of a jump at one frame: from here a second look is worth its time. (tuned on simulated shoots)"""
 _SWITCH_REACH: Final = 2
 """A switch may be spread over this many frames to either side."""
 _LEAST_STEP_DEG: Final = 1.5
 """Smaller steps are not told apart from drift. (tuned on simulated shoots)"""
+_LEAST_WEAK_STEP_DEG: Final = 3.0
+"""The same for switches that only a second look finds."""
 _STEP_FRAMES: Final = 8
 _FEWEST_TO_DRIFT: Final = 6
 _FEWEST_TO_WANDER: Final = 24
@@ -86,7 +90,8 @@ def find_switches(log_maps: Maps, log_prior: Array, odds: Array) -> list[int]:
     course = shoot_course.follow(log_maps, anew, odds, _WANDER)
     doubtful = shoot_course.follow(log_maps * np.float32(_TRUST), anew, odds, _WANDER)
     witnessed = np.convolve(doubtful.jumps, np.ones(2 * _WITNESS_REACH + 1), "full")[_WITNESS_REACH:]
-    switches = [at for at in _declared(course.jumps) if witnessed[at] >= _WITNESS_PROBABILITY]
+    sure = [at for at in _declared(course.jumps) if witnessed[at] >= _WITNESS_PROBABILITY]
+    switches = _with_weak(log_maps, log_prior, odds, course.jumps, sure)
     while True:
         steps = [_step_deg(log_maps, log_prior, switches, at) for at in range(len(switches))]
         if not steps or min(steps) >= _LEAST_STEP_DEG:
@@ -140,6 +145,40 @@ def _declared(jumps: Array) -> list[int]:
         share = np.cumsum(left[first:last])
         found.append(first + int(np.searchsorted(share, share[-1] / 2.0)))
         left[first:last] = 0.0
+
+
+def _with_weak(log_maps: Maps, log_prior: Array, odds: Array, jumps: Array, sure: list[int]) -> list[int]:
+    """Return the switches, and the weak ones at which two lights, each at rest or drifting, explain more than one.
+
+    A light that drifts fast and then falls back looks to the chain of frames like one that wanders.
+    """
+    found = list(sure)
+    for at in np.argsort(-jumps, kind="stable").tolist():
+        if jumps[at] < _WEAK_PROBABILITY:
+            break
+        first = max([0, *(other for other in found if other <= at)])
+        last = min([len(log_maps), *(other for other in found if other > at)])
+        if min(at - first, last - at) < _FEWEST_TO_DRIFT:
+            continue
+        before, after, whole = (
+            _moving_evidence(log_maps[part], log_prior)
+            for part in (slice(first, at), slice(at, last), slice(first, last))
+        )
+        more = sorted([*found, at])
+        likelier = _TRUST * (before + after - whole) > -np.log(odds[at])
+        if likelier and _step_deg(log_maps, log_prior, more, more.index(at)) >= _LEAST_WEAK_STEP_DEG:
+            found = more
+    return found
+
+
+def _moving_evidence(log_maps: Maps, log_prior: Array) -> float:
+    """Return the log-evidence of a light that is steady or drifts evenly, whichever has more."""
+    count = len(log_maps)
+    steady = _light(log_maps.sum(axis=0, dtype=np.float64), log_prior, np.zeros((count, 2)), "steady")
+    _, gain = _even_drift(log_maps, log_prior, np.arange(count, dtype=np.float64), steady.centre)
+    return _log_evidence(steady.log_sum, log_prior) + max(
+        gain - _DRIFT_COST - 0.5 * float(np.log(count)), 0.0
+    )
 
 
 def _step_deg(log_maps: Maps, log_prior: Array, switches: list[int], at: int) -> float:
