@@ -80,5 +80,5 @@ def oddness(log_map: NDArray[np.float32], log_prior: Array, cast: Cast, stretch:
 
 
 def _ramp(probability: float) -> float:
-    """Return 0 up to four to one, 1 from nineteen to one. (tuned on simulated shoots)"""
+    """Return 0 up to four to one and 1 from nineteen to one, as tuned on simulated shoots."""
     return min(max((probability - 0.8) / 0.15, 0.0), 1.0)
