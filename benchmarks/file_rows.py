@@ -10,7 +10,6 @@ from pathlib import Path
 
 import material
 import numpy as np
-import rawpy
 import tifffile
 from PIL import Image
 from timing import Row, by_turns
@@ -79,7 +78,7 @@ def _codec_alone(kind: str, path: Path, target: Path, graded: np.ndarray) -> Cal
     """Return what decodes the file, and encodes the graded picture (the time depends on what is encoded)."""
 
     def raw() -> None:
-        _develop(path)
+        material.develop(path)
         tifffile.imwrite(target, graded, photometric="rgb", **_deflate())
 
     def tiff() -> None:
@@ -99,22 +98,9 @@ def _deflate() -> dict[str, object]:
     return {"compression": "zlib", "compressionargs": {"level": 1}, "predictor": True, "maxworkers": 1}
 
 
-def _develop(path: Path) -> np.ndarray:
-    with rawpy.imread(str(path)) as raw:
-        return raw.postprocess(
-            gamma=(1, 1),
-            no_auto_bright=True,
-            adjust_maximum_thr=0.0,
-            use_camera_wb=True,
-            output_bps=16,
-            output_color=rawpy.ColorSpace.Rec2020,
-            user_flip=0,
-        )
-
-
 def _measuring_raw(path: Path) -> Row:
     times = by_turns(
-        {"decode": lambda: _develop(path), "measure": lambda: cast.measure(files.read_reduced(path))},
+        {"decode": lambda: material.develop(path), "measure": lambda: cast.measure(files.read_reduced(path))},
         rounds=3,
     )
     detail = f"{times['decode']:.2f} s"

@@ -14,8 +14,8 @@ from collections.abc import Callable
 from pathlib import Path
 
 import imagecodecs
+import material
 import numpy as np
-import rawpy
 import tifffile
 
 from grader import files
@@ -54,20 +54,6 @@ def decompress(path: Path) -> None:
             imagecodecs.delta_decode(strip.copy(), axis=1)
 
 
-def decode_raw(path: Path) -> None:
-    """Let LibRaw decode with the settings that grader uses."""
-    with rawpy.imread(str(path)) as raw:
-        raw.postprocess(
-            gamma=(1, 1),
-            no_auto_bright=True,
-            adjust_maximum_thr=0.0,
-            use_camera_wb=True,
-            output_bps=16,
-            output_color=rawpy.ColorSpace.Rec2020,
-            user_flip=0,
-        )
-
-
 def main() -> None:
     """Print the table."""
     print(f"{'file':32} {'codec':>8} {'file':>8} {'ratio':>7}")
@@ -77,7 +63,7 @@ def main() -> None:
         tell("24 MP 16-bit TIFF, zstd", best(lambda: decompress(path)), best(lambda: files.read(path)))
     for name in sys.argv[1:]:
         raw = Path(name)
-        tell(raw.name, best(lambda r=raw: decode_raw(r)), best(lambda r=raw: files.read(r)))
+        tell(raw.name, best(lambda r=raw: material.develop(r)), best(lambda r=raw: files.read(r)))
 
 
 def tell(name: str, codec: float, whole: float) -> None:

@@ -7,6 +7,7 @@ from datetime import datetime, timedelta
 from pathlib import Path
 
 import numpy as np
+import rawpy
 import tifffile
 from numpy.typing import NDArray
 from PIL import Image
@@ -116,3 +117,17 @@ def write_shoot(folder: Path, count: int, megapixels: float) -> list[Path]:
         paths.append(folder / f"frame-{index:05d}.jpg")
         write_jpeg(paths[-1], pictures[key], start + timedelta(seconds=7 * index))
     return paths
+
+
+def develop(path: Path) -> np.ndarray:
+    """Let LibRaw decode a raw file with the settings that grader uses."""
+    with rawpy.imread(str(path)) as raw:
+        return raw.postprocess(
+            gamma=(1, 1),
+            no_auto_bright=True,
+            adjust_maximum_thr=0.0,
+            use_camera_wb=True,
+            output_bps=16,
+            output_color=rawpy.ColorSpace.Rec2020,
+            user_flip=0,
+        )

@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 import tifffile
 from batchkit import NEUTRAL, WARM, encoded_scene, write_jpeg, write_tiff
+from faults.faultkit import digests
 from PIL import Image
 
 import grader
@@ -30,14 +31,6 @@ def shoot(tmp_path: Path) -> Path:
         write_tiff(folder / f"t{seed}.tif", seed=seed)
         write_jpeg(folder / f"j{seed}.jpg", seed=seed, taken_at=f"2031:05:04 18:00:{seed:02}")
     return folder
-
-
-def digests(folder: Path) -> dict[str, str]:
-    return {
-        path.relative_to(folder).as_posix(): hashlib.sha256(path.read_bytes()).hexdigest()
-        for path in sorted(folder.rglob("*"))
-        if path.is_file() and path.name not in {LOG_NAME, ".grader.lock"}
-    }
 
 
 def run(paths: object, out: Path, **how: object) -> list[dict]:

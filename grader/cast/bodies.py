@@ -14,9 +14,8 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-from grader.cast import shoot_course
 from grader.cast.shoot_course import Maps
-from grader.cast.stretches import WORTH
+from grader.cast.stretches import pooled_place
 
 Array = NDArray[np.float64]
 
@@ -99,7 +98,8 @@ def measure_step(log_maps: Maps, log_prior: Array, pairs: Sequence[tuple[Span, S
     if not pairs:
         return None
     common = [_common(*pair) for pair in pairs]
-    differences = np.array([_difference(log_maps, log_prior, *rows) for rows in common])
+    lights = np.array([[pooled_place(log_maps[rows], log_prior) for rows in pair] for pair in common])
+    differences = lights[:, 1] - lights[:, 0]
     frames = np.array([[1.0 / len(one) + 1.0 / len(other)] for one, other in common])
     variance = _PER_LIGHT**2 + _PER_FRAME**2 * frames
     ab = np.median(differences, axis=0)
@@ -116,17 +116,6 @@ def _probably_shared(off: Array, variance: Array) -> Array:
     """Return the probability that each pair is under one light, by how far it is off the common step."""
     density = np.exp(-0.5 * (off**2 / variance).sum(axis=1)) / (2.0 * np.pi * np.sqrt(variance.prod(axis=1)))
     return np.asarray((1.0 - _APART) * density / ((1.0 - _APART) * density + _APART * _APART_DENSITY))
-
-
-def _difference(log_maps: Maps, log_prior: Array, one: NDArray[np.intp], other: NDArray[np.intp]) -> Array:
-    """Return how far the pooled light of the second group of frames lies from that of the first."""
-    first, second = (
-        shoot_course.place_of(
-            shoot_course.pooled(log_maps[rows].sum(axis=0, dtype=np.float64), log_prior, len(rows), WORTH)
-        )
-        for rows in (one, other)
-    )
-    return second - first
 
 
 def _common(one: Span, other: Span) -> tuple[NDArray[np.intp], NDArray[np.intp]]:

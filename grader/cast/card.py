@@ -10,12 +10,13 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
+from grader.cast import plane
 from grader.cast.box import Box
 from grader.cast.measure import measure_proxy
 from grader.cast.patch import PatchSample, angles_deg, direction
 from grader.cast.proxy import build_proxy, cell_width
 from grader.cast.sample import sample_patch
-from grader.colour.spaces import SRGB_CURVE, XYZ_FROM_REC2020, linear_variant, space_by_name
+from grader.colour.spaces import SRGB_CURVE, linear_variant, space_by_name
 from grader.colour.transfer import encode
 from grader.errors import GraderError, PresetError, TooFewUsablePixels
 from grader.model import Cast, Frame, Proxy
@@ -174,7 +175,7 @@ def _features(proxy: Proxy) -> tuple[Array, Mask]:
     linear = proxy.linear.astype(np.float64)
     seen = (proxy.usable > 0.95)[..., None]
     smooth = _box3(np.where(seen, linear, 0.0)) / np.maximum(_box3(seen.astype(np.float64)), 1e-9)
-    luminance = smooth @ XYZ_FROM_REC2020[1]
+    luminance = plane.luminance(smooth)
     floor = 0.01 * float(np.percentile(luminance, 99.0)) + 1e-9
     logs = np.log(np.maximum(smooth, 0.1 * floor))
     features = np.stack(

@@ -8,9 +8,9 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
+from grader.cast import plane
 from grader.cast.plane import AB_FROM_LOG_LMS, LMS_FROM_REC2020
 from grader.cast.proxy_loops import sum_boxes
-from grader.colour.spaces import XYZ_FROM_REC2020
 from grader.model import Proxy
 
 Array = NDArray[np.float64]
@@ -56,7 +56,7 @@ def cells_from_proxy(proxy: Proxy, target: int = CELLS) -> Cells:
     """
     linear, usable = _box_average(proxy, target)
     lms = linear @ LMS_FROM_REC2020.T
-    luminance = linear @ XYZ_FROM_REC2020[1]
+    luminance = plane.luminance(linear)
     ok = (usable >= _USABLE_SHARE) & (lms.min(axis=-1) > 0) & (luminance > 0)
     ab = np.log(np.where(ok[..., None], lms, 1.0)) @ AB_FROM_LOG_LMS.T
     return Cells(linear, np.where(ok, luminance, 1.0), ab, ok)

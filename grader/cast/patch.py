@@ -9,9 +9,9 @@ from typing import Any, Final, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from grader.cast import plane
 from grader.cast.box import Box
 from grader.colour.opponent import cast_from_xy
-from grader.colour.spaces import XYZ_FROM_REC2020
 from grader.colour.transfer import decode
 from grader.colour.white import cct_duv_from_xy, linear_from_xy, xy_from_linear
 from grader.errors import PresetError, TooFewUsablePixels
@@ -120,7 +120,7 @@ def measure_pixels(
         )
     daylight = np.einsum("yxc,dc->yxd", linear, _daylight_from_linear(frame))
     mean = daylight[usable].mean(axis=0)
-    luminance = float(_luminance(mean))
+    luminance = float(plane.luminance(mean))
     if not luminance >= limits.darkest or (mean.min() <= 0.0 and luminance < 10 * limits.darkest):
         raise TooFewUsablePixels(
             f"{what} is too dark (luminance {luminance:.4f}, white = 1)",
@@ -181,16 +181,12 @@ def _daylight_from_linear(frame: Frame) -> Matrix:
     return matrix if daylight is None else daylight @ matrix
 
 
-def _luminance(linear: Array) -> Any:
-    return linear @ XYZ_FROM_REC2020[1]
-
-
 def _described(linear: Array, usable: NDArray[np.bool_], mean: Array) -> PatchSample:
     blocks, counts = _block_means(linear, usable)
     pixels = linear[usable]
-    grain = float(_luminance(pixels).std() / _luminance(mean))
+    grain = float(plane.luminance(pixels).std() / plane.luminance(mean))
     grain_deg = float(np.sqrt(np.mean(angles_deg(pixels, mean) ** 2)))
-    spread = float(_luminance(blocks).std() / _luminance(mean))
+    spread = float(plane.luminance(blocks).std() / plane.luminance(mean))
     spread_deg = float(np.sqrt(np.mean(angles_deg(blocks, mean) ** 2)))
     noise = 1.0 / float(np.mean(counts))
     texture_deg = math.sqrt(max(spread_deg**2 - grain_deg**2 * noise, 0.0))
@@ -201,7 +197,7 @@ def _described(linear: Array, usable: NDArray[np.bool_], mean: Array) -> PatchSa
             light_xy=(float(x), float(y)),
             doubt_deg=math.sqrt(stray_deg**2 + texture_deg**2 + CARD_TINT_DEG**2),
             n=int(usable.sum()),
-            luminance=float(_luminance(mean)),
+            luminance=float(plane.luminance(mean)),
             texture=math.sqrt(max(spread**2 - grain**2 * noise, 0.0)),
             texture_deg=texture_deg,
             grain=grain,

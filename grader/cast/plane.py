@@ -84,7 +84,7 @@ def linear_from_ab(ab: Array) -> Array:
     """
     lms = np.exp(np.asarray(ab, np.float64) @ _LOG_LMS_FROM_AB.T)
     linear = lms @ _REC2020_FROM_LMS.T
-    return np.asarray(linear / (linear @ XYZ_FROM_REC2020[1])[..., None])
+    return np.asarray(linear / luminance(linear)[..., None])
 
 
 def ab_from_xy(xy: Array) -> Array:

@@ -125,6 +125,15 @@ def measure_light(log_maps: Maps, log_prior: Array, clock: Array) -> Light:
     return max(tried, key=lambda candidate: candidate[0])[1]
 
 
+def pooled_place(log_maps: Maps, log_prior: Array) -> Array:
+    """Return the light that frames share if it holds still, as its place in the plane, (2,)."""
+    return _place(log_maps.sum(axis=0, dtype=np.float64), log_prior, len(log_maps))
+
+
+def _place(log_sum: Array, log_prior: Array, frames: int) -> Array:
+    return shoot_course.place_of(shoot_course.pooled(log_sum, log_prior, frames, WORTH))
+
+
 def _declared(jumps: Array) -> list[int]:
     """Return where the light jumps, ascending.
 
@@ -186,12 +195,7 @@ def _step_deg(log_maps: Maps, log_prior: Array, switches: list[int], at: int) ->
     here = switches[at]
     first = max(here - _STEP_FRAMES, switches[at - 1] if at else 0)
     last = min(here + _STEP_FRAMES, switches[at + 1] if at + 1 < len(switches) else len(log_maps))
-    before, after = (
-        shoot_course.place_of(
-            shoot_course.pooled(part.sum(axis=0, dtype=np.float64), log_prior, len(part), WORTH)
-        )
-        for part in (log_maps[first:here], log_maps[here:last])
-    )
+    before, after = (pooled_place(part, log_prior) for part in (log_maps[first:here], log_maps[here:last]))
     return float(shoot_course.degrees_apart(before, after))
 
 
@@ -226,8 +230,7 @@ def _wandering(log_maps: Maps, log_prior: Array, steady_evidence: float) -> tupl
 def _light(
     log_sum: Array, log_prior: Array, moves: Array, model: Literal["steady", "drift", "wander"]
 ) -> Light:
-    weights = shoot_course.pooled(log_sum, log_prior, len(moves), WORTH)
-    return Light(shoot_course.place_of(weights), moves, log_sum, model)
+    return Light(_place(log_sum, log_prior, len(moves)), moves, log_sum, model)
 
 
 def _log_evidence(log_sum: Array, log_prior: Array) -> float:
