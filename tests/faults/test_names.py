@@ -110,14 +110,18 @@ def test_what_is_written_for_people_and_spreadsheets_is_harmless(
 
 def test_the_log_stays_json_for_other_readers(shoot: Path, tmp_path: Path) -> None:
     list(grader.neutralise([shoot], tmp_path / "out"))
-    for line in (tmp_path / "out" / LOG_NAME).read_bytes().split(b"\n")[:-1]:
-        json.loads(line.decode("utf-8"))
+    lines = (tmp_path / "out" / LOG_NAME).read_bytes().split(b"\n")[:-1]
+    assert lines
+    for line in lines:
+        assert isinstance(json.loads(line.decode("utf-8"), parse_constant=pytest.fail), dict)
 
 
 def test_the_source_is_named_in_xmp_that_other_readers_can_parse(shoot: Path, tmp_path: Path) -> None:
     # expat is the outside reader: it refuses characters that XML 1.0 does not have.
     list(grader.neutralise([shoot], tmp_path / "out"))
-    for path in (tmp_path / "out").glob("*.tif"):
+    written = list((tmp_path / "out").glob("*.tif"))
+    assert written
+    for path in written:
         with tifffile.TiffFile(path) as tif:
             packet = tif.pages.first.tags[700].value
         assert b"SourceFile" in packet
